@@ -1,0 +1,1 @@
+"""Saltmere Trust, an invented firm: its site file, its rules and a year of evenings on which things go wrong."""

@@ -1,0 +1,65 @@
+"""Settings and rules are adopted by themselves: archived by hash, recorded, and a change told."""
+
+from __future__ import annotations
+
+import json
+from datetime import datetime
+
+import monitor
+from monitor.facts import Hand, NamedFile, RulesAdopted, SettingsAdopted, SiteOpened
+from monitor.ledger.chain import Transaction
+from monitor.limits.rules import read_rules
+from monitor.limits.wording import differences
+from monitor.notices import outbox
+from monitor.notices.compose import compose_terms
+from monitor.reading.plain import read_yaml
+from monitor.state import State
+
+
+def adopt(state: State, now: datetime, hand: Hand) -> str:
+    """Take the site file and the rule files as they lie there into force; returns the hash that recipes name them by.
+
+    Nothing is recorded when they are what was adopted last. Raises WrongUse when they are wrong.
+    """
+    site = state.site
+    rules = read_rules(site.rule_files, site.settings.rule_context())
+    settings_hash, *rule_hashes = state.archive.put_many([site.data, *(data for _, data in site.rule_files)])
+    files = tuple(NamedFile(name, sha256) for (name, _), sha256 in zip(site.rule_files, rule_hashes, strict=True))
+    signed = {"settings": settings_hash, "rules": [[file.name, file.sha256] for file in files]}
+    terms_hash = state.archive.put(json.dumps(signed, separators=(",", ":")).encode())
+    last = state.last_adopted()
+    if last is not None and last[0] == terms_hash:
+        return terms_hash
+    old_terms, old_settings = last or (None, None)
+    with state.ledger.transaction(now) as transaction:
+        if last is None:
+            program = f"duskcheck {monitor.__version__}"
+            transaction.append(SiteOpened(site.settings.site, site.settings.base_currency, program, hand))
+        if old_settings != settings_hash:
+            changes = _setting_changes(state.archive.get(old_settings), site.data) if old_settings else ()
+            _record(state, transaction, SettingsAdopted(settings_hash, old_settings, changes, hand))
+        changes = tuple(differences(state.terms(old_terms).rules, rules)) if old_terms else ()
+        _record(state, transaction, RulesAdopted(terms_hash, old_terms, settings_hash, files, changes, hand))
+    return terms_hash
+
+
+def _record(state: State, transaction: Transaction, fact: SettingsAdopted | RulesAdopted) -> None:
+    """Record an adoption, and queue a notice of what it changed."""
+    entry = transaction.append(fact)
+    if not fact.changes:
+        return
+    settings = state.site.settings
+    rules = read_rules(state.site.rule_files, settings.rule_context())
+    titles = {rule.id: rule.title for rule in rules}
+    notices = compose_terms(settings.site, fact, titles, settings.notices.nightly_note, entry.seq, entry.hash)
+    for queued in outbox.queue(notices, settings.notices, state.archive, (entry.seq, entry.hash)):
+        transaction.append(queued)
+
+
+def _setting_changes(old: bytes, new: bytes) -> tuple[str, ...]:
+    """Which top-level keys of the site file differ."""
+    before, after = (dict(read_yaml("site.yaml", data).data) for data in (old, new))
+    changes = [f"{key}: added" for key in after if key not in before]
+    changes += [f"{key}: removed" for key in before if key not in after]
+    changes += [f"{key}: changed" for key in after if key in before and after[key] != before[key]]
+    return tuple(sorted(changes)) or ("only comments or layout",)

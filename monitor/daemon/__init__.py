@@ -1,0 +1,1 @@
+"""When evenings happen: the schedule, catching up, stopping."""

@@ -1,0 +1,185 @@
+"""The evenings on record as a table: which dates were checked, in which editions, with what outcome."""
+
+from __future__ import annotations
+
+import json
+import sqlite3
+from dataclasses import dataclass
+from datetime import date
+from typing import Any
+
+from monitor.facts import Entry, EveningChecked, EveningMissed
+from monitor.words import Outcome, Recipe
+
+TABLES = """
+CREATE TABLE evening (
+    seq INTEGER PRIMARY KEY, hash TEXT NOT NULL, at TEXT NOT NULL, day TEXT NOT NULL, round TEXT NOT NULL,
+    edition INTEGER NOT NULL, recipe TEXT NOT NULL, inputs TEXT NOT NULL, sessions TEXT NOT NULL,
+    completes INTEGER NOT NULL, outcome TEXT NOT NULL, counts TEXT NOT NULL, results TEXT NOT NULL,
+    told INTEGER NOT NULL
+) STRICT;
+CREATE INDEX evening_day ON evening (day, round, edition);
+CREATE TABLE book_line (
+    seq INTEGER NOT NULL, subject TEXT NOT NULL, currency TEXT NOT NULL, value_at_risk REAL, pnl REAL,
+    PRIMARY KEY (seq, subject)
+) STRICT, WITHOUT ROWID;
+CREATE TABLE missed (seq INTEGER PRIMARY KEY, day TEXT NOT NULL, round TEXT NOT NULL, reason TEXT NOT NULL) STRICT;
+"""
+
+
+@dataclass(frozen=True)
+class CheckedEvening:
+    """One edition of an evening, as its ledger entry says. at: UTC text."""
+
+    seq: int
+    hash: str
+    at: str
+    edition: int
+    recipe: Recipe
+    inputs: str
+    sessions: str
+    completes: bool
+    outcome: Outcome
+    counts: dict[str, int]
+    results: str
+    told: bool
+
+
+def record(index: sqlite3.Connection, entry: Entry) -> None:
+    """Fold one ledger entry into the tables."""
+    match entry.fact:
+        case EveningChecked() as fact:
+            index.execute(
+                "INSERT INTO evening VALUES (?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?, ?)",
+                (
+                    entry.seq,
+                    entry.hash,
+                    entry.at,
+                    fact.recipe.date.isoformat(),
+                    fact.recipe.round,
+                    fact.edition,
+                    _recipe_text(fact.recipe),
+                    fact.inputs,
+                    fact.sessions,
+                    fact.completes,
+                    fact.outcome,
+                    json.dumps(fact.counts),
+                    fact.results,
+                    fact.told,
+                ),
+            )
+            index.executemany(
+                "INSERT INTO book_line VALUES (?, ?, ?, ?, ?)",
+                [(entry.seq, own.subject, own.currency, own.value_at_risk, own.pnl) for own in fact.books],
+            )
+        case EveningMissed() as fact:
+            index.execute(
+                "INSERT INTO missed VALUES (?, ?, ?, ?)", (entry.seq, fact.day.isoformat(), fact.round, fact.reason)
+            )
+
+
+def latest(index: sqlite3.Connection, day: date, round_id: str) -> CheckedEvening | None:
+    """The newest edition of an evening."""
+    found = _rows(index, "WHERE day = ? AND round = ? ORDER BY edition DESC LIMIT 1", (day.isoformat(), round_id))
+    return found[0] if found else None
+
+
+def all_editions(index: sqlite3.Connection) -> list[CheckedEvening]:
+    """Every edition of every evening, in the order they were recorded."""
+    return _rows(index, "ORDER BY seq", ())
+
+
+def latest_of_all(index: sqlite3.Connection, since: date | None = None) -> list[CheckedEvening]:
+    """The newest edition of each evening, by date and then in the order of checking."""
+    return _rows(
+        index,
+        "AS e WHERE day >= ? AND edition = (SELECT MAX(edition) FROM evening AS o WHERE o.day = e.day"
+        " AND o.round = e.round) ORDER BY day, seq",
+        (since.isoformat() if since else "",),
+    )
+
+
+def before(index: sqlite3.Connection, day: date, round_id: str) -> CheckedEvening | None:
+    """The newest edition of the evening before a date, of the same round."""
+    found = _rows(
+        index, "WHERE day < ? AND round = ? ORDER BY day DESC, edition DESC LIMIT 1", (day.isoformat(), round_id)
+    )
+    return found[0] if found else None
+
+
+def after(index: sqlite3.Connection, day: date, round_id: str) -> CheckedEvening | None:
+    """The newest edition of the evening after a date, of the same round."""
+    found = _rows(index, "WHERE day > ? AND round = ? ORDER BY day, edition DESC LIMIT 1", (day.isoformat(), round_id))
+    return found[0] if found else None
+
+
+def any_after(index: sqlite3.Connection, day: date) -> bool:
+    """Whether an evening of a later date is on record."""
+    return index.execute("SELECT 1 FROM evening WHERE day > ? LIMIT 1", (day.isoformat(),)).fetchone() is not None
+
+
+def book_lines(
+    index: sqlite3.Connection, subject: str, until: date
+) -> list[tuple[date, str, float | None, float | None]]:
+    """Date, currency, VaR and P&L of a book or the firm in the latest edition of each evening up to a date, in order.
+
+    When several rounds of a date tell of the subject, the one checked last counts.
+    """
+    rows = index.execute(
+        "SELECT day, currency, value_at_risk, pnl, MAX(e.seq) FROM evening AS e JOIN book_line AS b ON b.seq = e.seq"
+        " WHERE subject = ? AND day <= ? AND edition = (SELECT MAX(edition) FROM evening AS o WHERE o.day = e.day"
+        " AND o.round = e.round) GROUP BY day ORDER BY day",
+        (subject, until.isoformat()),
+    )
+    return [(date.fromisoformat(day), currency, var, pnl) for day, currency, var, pnl, _ in rows]
+
+
+def untold(index: sqlite3.Connection, after: int) -> list[CheckedEvening]:
+    """The evenings recorded after a sequence that queued no notices of their own."""
+    return _rows(index, "WHERE told = 0 AND seq > ? ORDER BY seq", (after,))
+
+
+def last_day(index: sqlite3.Connection, round_id: str) -> date | None:
+    """The newest date of a round that was checked or given up."""
+    (found,) = index.execute(
+        "SELECT MAX(day) FROM (SELECT day FROM evening WHERE round = ?"
+        " UNION ALL SELECT day FROM missed WHERE round = ?)",
+        (round_id, round_id),
+    ).fetchone()
+    return date.fromisoformat(found) if found else None
+
+
+def _rows(index: sqlite3.Connection, condition: str, values: tuple[Any, ...]) -> list[CheckedEvening]:
+    rows = index.execute(
+        "SELECT seq, hash, at, edition, recipe, inputs, sessions, completes, outcome, counts, results, told"
+        f" FROM evening {condition}",
+        values,
+    )
+    return [
+        CheckedEvening(
+            seq=seq,
+            hash=hash_,
+            at=at,
+            edition=edition,
+            recipe=_recipe(recipe),
+            inputs=inputs,
+            sessions=sessions,
+            completes=bool(completes),
+            outcome=Outcome(outcome),
+            counts=json.loads(counts),
+            results=results,
+            told=bool(told),
+        )
+        for seq, hash_, at, edition, recipe, inputs, sessions, completes, outcome, counts, results, told in rows
+    ]
+
+
+def _recipe_text(recipe: Recipe) -> str:
+    days = (recipe.date, recipe.positions_on, recipe.prices_on, recipe.window_to)
+    return json.dumps([*map(str, days), recipe.round, recipe.rules, recipe.known])
+
+
+def _recipe(text: str) -> Recipe:
+    *days, round_id, rules, known = json.loads(text)
+    day, positions_on, prices_on, window_to = map(date.fromisoformat, days)
+    return Recipe(day, round_id, positions_on, prices_on, window_to, rules, known)

@@ -1,0 +1,1 @@
+"""The register of excesses: a pure fold of standings, no numpy and no clock."""

@@ -1,0 +1,157 @@
+"""Takes in what lies in the drop: each new file is hashed, archived, parsed, and accepted or refused with reasons."""
+
+from __future__ import annotations
+
+import hashlib
+import sqlite3
+import stat
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass
+from pathlib import Path
+
+from monitor.facts import FileAccepted, FileRefused
+from monitor.feed.history import History
+from monitor.feed.kinds import Panel, Vocabulary, parse
+from monitor.feed.known import in_effect, refused_before
+from monitor.feed.names import UNFINISHED, Name, comes_later, read_name
+from monitor.feed.tables import MOST_FINDINGS
+from monitor.words import FileKind, Finding, WrongUse
+
+
+@dataclass(frozen=True)
+class Lying:
+    """A file in the drop as one look found it. changed: nanoseconds."""
+
+    path: Path
+    size: int
+    changed: int
+    regular: bool
+
+
+@dataclass(frozen=True)
+class Taken:
+    """The decision about one file, and its values when it holds prices or rates."""
+
+    lying: Lying
+    fact: FileAccepted | FileRefused
+    panel: Panel | None = None
+
+
+def look(drop: Path) -> list[Lying]:
+    """Everything in the drop that is not plainly unfinished, by name. Raises WrongUse when there is no drop."""
+    try:
+        paths = sorted(drop.iterdir())
+    except OSError as error:
+        raise WrongUse(
+            f"the drop {drop} cannot be read: {error.strerror}. Create it or name another in paths"
+        ) from None
+    found = []
+    for path in paths:
+        if UNFINISHED.fullmatch(path.name):
+            continue
+        try:
+            about = path.lstat()
+        except FileNotFoundError:  # taken away between the two looks
+            continue
+        found.append(Lying(path, about.st_size, about.st_mtime_ns, stat.S_ISREG(about.st_mode)))
+    return found
+
+
+def take(
+    lying: list[Lying],
+    index: sqlite3.Connection,
+    history: History,
+    put: Callable[[bytes], str],
+    patterns: Mapping[FileKind, str],
+    words: Vocabulary,
+) -> Iterator[Taken]:
+    """Decide about each file that is new or changed. What was decided before is passed over without a word.
+
+    The caller records the facts, and then calls `remember` for each.
+    """
+    for file in lying:
+        name = read_name(file.path.name, patterns)
+        sha256 = history.seen(file.path.name, file.size, file.changed)
+        if sha256 is not None and _decided(index, file, name, sha256):
+            continue
+        data, trouble = _read(file)
+        sha256 = hashlib.sha256(data).hexdigest() if data is not None else None
+        if _decided(index, file, name, sha256):
+            if sha256 is not None:
+                history.remember_seen(file.path.name, file.size, file.changed, sha256)
+            continue
+        yield _decide(file, name, data, trouble, put, words)
+
+
+def remember(taken: Taken, history: History) -> None:
+    """Keep in the cache what a recorded file holds and that it was seen."""
+    if taken.panel is not None and taken.fact.sha256 is not None:
+        history.keep(taken.fact.sha256, taken.panel)
+    if taken.fact.sha256 is not None:
+        history.remember_seen(taken.lying.path.name, taken.lying.size, taken.lying.changed, taken.fact.sha256)
+
+
+def _decided(index: sqlite3.Connection, file: Lying, name: Name | None, sha256: str | None) -> bool:
+    if name and sha256 and in_effect(index, name.kind, name.source, name.day) == sha256:
+        return True
+    return refused_before(index, file.path.name, sha256)
+
+
+def _read(file: Lying) -> tuple[bytes | None, Finding | None]:
+    if not file.regular:
+        return None, Finding(file.path.name, None, None, "a folder, link or special file", "a regular file")
+    try:
+        return file.path.read_bytes(), None
+    except OSError as error:
+        found = f"a file that cannot be read ({error.strerror})"
+        return None, Finding(file.path.name, None, None, found, "a readable file", "Check its owner and permissions.")
+
+
+def _decide(
+    file: Lying,
+    name: Name | None,
+    data: bytes | None,
+    trouble: Finding | None,
+    put: Callable[[bytes], str],
+    words: Vocabulary,
+) -> Taken:
+    if data is None:
+        return Taken(file, _refusal(file, name, None, (trouble,) if trouble else ()))
+    if name is None:
+        return Taken(file, _refusal(file, None, put(data), (_unnamed(file.path.name),)))
+    parsed = parse(name.kind, file.path.name, data, name.day, words)
+    sha256 = put(data)
+    if parsed.findings:
+        return Taken(file, _refusal(file, name, sha256, parsed.findings))
+    accepted = FileAccepted(
+        name=file.path.name,
+        file=name.kind,
+        source=name.source,
+        day=name.day,
+        sha256=sha256,
+        size=len(data),
+        rows=parsed.rows,
+        first=parsed.first,
+        last=parsed.last,
+    )
+    return Taken(file, accepted, parsed.content if isinstance(parsed.content, Panel) else None)
+
+
+def _refusal(file: Lying, name: Name | None, sha256: str | None, findings: tuple[Finding, ...]) -> FileRefused:
+    return FileRefused(
+        name=file.path.name,
+        file=name.kind if name else None,
+        source=name.source if name else "",
+        day=name.day if name else None,
+        sha256=sha256,
+        size=file.size,
+        reasons=len(findings),
+        findings=findings[:MOST_FINDINGS],
+    )
+
+
+def _unnamed(name: str) -> Finding:
+    if comes_later(name):
+        return Finding(name, None, None, "a kind of file that is not there yet", "the kinds that the README names")
+    expected = "a name by the patterns of the site, as prices_2026-01-31.csv"
+    return Finding(name, None, None, "a name that fits no pattern", expected, "Rename it or take it out of the drop.")

@@ -1,0 +1,1 @@
+"""Rules, the measures they name, and their evaluation."""

@@ -1,0 +1,131 @@
+"""What an evening says beyond its rules: figures of each book, what could not be measured, what no rule covers."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+
+import numpy as np
+
+from monitor.limits.measures import MEASURES, Measured, Parameters
+from monitor.limits.slices import Slice
+from monitor.limits.subjects import FIRM, Members, book_subject, members_of, position_subject
+from monitor.limits.valuation import Valuation
+from monitor.words import Subject, Unit
+from monitor.world import Book, BookFigures, MeasureCall, Rule, Selector, Terms, Unmeasured, World
+
+
+def figures_of_books(valuation: Valuation) -> Iterator[BookFigures]:
+    """Each book of this round, and the firm when the round completes it, by the site's default measure."""
+    world = valuation.world
+    for part in _wholes(valuation):
+        subject = part.members.subjects[0]
+        tail = world.terms.default_tail
+        measured = {name: _ask(part, name, {}) for name in ("gross", "net", "day_loss")}
+        measured |= {name: _ask(part, name, tail.parameters) for name in ("value_at_risk", "expected_shortfall")}
+        nav, nav_reason = part.denominator("nav")
+        book_nav = world.nav.get(subject.book) if subject.book else None
+        missing = [reason for book, reason in world.holdings.missing.items() if subject.book in (None, book)]
+        values = {name: None if missing else _value(own) for name, own in measured.items()}
+        reasons = [*missing[:1], *(own.reasons[0] for own in measured.values()), nav_reason[0]]
+        sessions = measured["value_at_risk"].n
+        loss = values["day_loss"]
+        yield BookFigures(
+            subject=subject,
+            currency=part.currency,
+            positions=len(part.members.position),
+            gross=values["gross"],
+            net=values["net"],
+            nav=None if nav_reason[0] else float(nav[0]),
+            nav_on=book_nav.on if book_nav else None,
+            value_at_risk=values["value_at_risk"],
+            expected_shortfall=values["expected_shortfall"],
+            pnl=None if loss is None else 0.0 - loss,
+            n=int(sessions[0]) if sessions is not None else None,
+            how=measured["value_at_risk"].how,
+            reasons=tuple(dict.fromkeys(reason for reason in reasons if reason)),
+        )
+
+
+def find_unmeasured(valuation: Valuation) -> Iterator[Unmeasured]:
+    """The books of this round without positions, and the positions without an exposure or without a window."""
+    world = valuation.world
+    window = int(str(world.terms.default_tail.parameters["window"]))
+    for part in _wholes(valuation):
+        book = part.members.subjects[0].book
+        if book is None:
+            continue
+        if book in world.holdings.missing:
+            yield Unmeasured(book_subject(book), world.holdings.missing[book])
+        everything = np.array([part.scenarios(window).pnl.shape[1]], dtype=np.int64)
+        troubles = part.window_troubles(window, everything) | part.exposure_troubles()
+        for at, reason in sorted(troubles.items()):
+            yield Unmeasured(_position(world, book, at), reason)
+
+
+def find_uncovered(world: World, asked: Sequence[Members]) -> Iterator[Subject]:
+    """The books of this round that no rule in force asks about, and of the other books such positions."""
+    covered = np.zeros(len(world.holdings.quantity), dtype=np.bool_)
+    asked_keys = {subject.key for members in asked for subject in members.subjects}
+    for members in asked:
+        covered[members.position] = True
+    for number, book in enumerate(world.terms.firm.books):
+        own = world.holdings.book == number
+        if not world.scope.holds(book.id):
+            continue
+        if not (covered & own).any() and not asked_keys & {FIRM.key, book_subject(book.id).key}:
+            yield book_subject(book.id)
+        else:
+            yield from (_position(world, book.id, at) for at in np.flatnonzero(own & ~covered).tolist())
+
+
+def _position(world: World, book: str, at: int) -> Subject:
+    return position_subject(book, world.market.instruments[int(world.holdings.instrument[at])].id)
+
+
+def _wholes(valuation: Valuation) -> Iterator[Slice]:
+    """One slice for each book of this round, and one for the firm when the round completes it."""
+    world = valuation.world
+    firm = world.terms.firm
+    for book in firm.books:
+        if world.scope.holds(book.id):
+            yield _whole(valuation, book, book.currency, book.calendar)
+    if world.scope.completes:
+        yield _whole(valuation, None, firm.base_currency, firm.calendar)
+
+
+def _whole(valuation: Valuation, book: Book | None, currency: str, calendar: str) -> Slice:
+    rule = _unwritten_rule(valuation.world.terms, book)
+    return Slice(valuation, rule, members_of(rule, valuation.world), currency, calendar)
+
+
+def _unwritten_rule(terms: Terms, book: Book | None) -> Rule:
+    """A rule without a limit that applies to a book, or to the firm."""
+    return Rule(
+        id="",
+        title="",
+        applies_to=(Selector("book", (book.id,)),) if book else (),
+        each=None,
+        measure=MeasureCall(terms.default_tail.name, terms.default_tail.parameters),
+        unit=Unit.AMOUNT,
+        currency=None,
+        near=None,
+        limit=None,
+        near_below=None,
+        limit_below=None,
+        kind=None,
+        owner=None,
+        tell=(),
+        in_force_from=None,
+        in_force_to=None,
+        because=None,
+        file="",
+        line=0,
+    )
+
+
+def _ask(part: Slice, name: str, parameters: Parameters) -> Measured:
+    return MEASURES[name](part, parameters, Unit.AMOUNT)
+
+
+def _value(measured: Measured) -> float | None:
+    return None if measured.reasons[0] else float(measured.value[0])

@@ -1,0 +1,167 @@
+"""Rules in plain English: one sentence for each, and what differs between two sets."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Iterator, Mapping
+from decimal import Decimal
+
+from monitor.limits.catalogue import MEASURES
+from monitor.words import Unit
+from monitor.world import Rule, Selector
+
+_SHARES = {Unit.OF_NAV: " of NAV", Unit.OF_GROSS: " of gross exposure"}
+_METHODS = {
+    "historical": "historical simulation",
+    "normal": "normal distribution",
+    "student_t": "Student's t distribution",
+    "sample": "sample standard deviation",
+    "ewma": "exponentially weighted",
+}
+
+
+def sentence(rule: Rule) -> str:
+    """One sentence that says the whole limit: subjects, measure with its parameters, levels with unit, from when."""
+    text = f"{rule.id}: {_subject(rule)} {_demand(rule)}"
+    return f"{text}{_in_force(rule)}."
+
+
+def made_title(rule: Rule) -> str:
+    """A title for a rule that has none."""
+    text = f"{MEASURES[rule.measure.name].noun} {_whose(rule).rstrip(',')}: {_limits(rule)}"
+    return text[0].upper() + text[1:]
+
+
+def differences(old: Iterable[Rule], new: Iterable[Rule]) -> list[str]:
+    """What changed from one set of rules to another, one line a change. Where a rule is written does not count."""
+    before = {rule.id: rule for rule in old}
+    after = {rule.id: rule for rule in new}
+    lines = [f"new rule {sentence(rule)}" for name, rule in after.items() if name not in before]
+    lines += [f"rule {name} is no more ({rule.title})" for name, rule in before.items() if name not in after]
+    for name, rule in after.items():
+        if name in before:
+            lines += _changes(before[name], rule)
+    return lines
+
+
+def _changes(old: Rule, new: Rule) -> Iterator[str]:
+    was, now = _parts(old), _parts(new)
+    for part, text in now.items():
+        if text != was[part]:
+            yield f"rule {new.id}: {part} was {was[part]}, is now {text}"
+
+
+def _parts(rule: Rule) -> Mapping[str, str]:
+    """Everything that a rule says, in words."""
+    levels = {key: getattr(rule, key) for key in ("near", "limit", "near_below", "limit_below")}
+    return {
+        "title": f"'{rule.title}'",
+        "applies to": ", ".join(map(_selector, rule.applies_to)) or "everything",
+        "each": rule.each or "one subject",
+        "measure": rule.measure.name + _parameters(rule),
+        "unit": rule.unit + (f" in {rule.currency}" if rule.currency else ""),
+        **{key.replace("_", " "): "none" if level is None else amount(rule, level) for key, level in levels.items()},
+        "class": rule.kind or "none",
+        "owner": rule.owner or "nobody",
+        "told": ", ".join(rule.tell),
+        "in force": _in_force(rule).strip(", ") or "always",
+        "because": f"'{rule.because}'" if rule.because else "no reason given",
+    }
+
+
+def _subject(rule: Rule) -> str:
+    return f"the {MEASURES[rule.measure.name].noun}{_parameters(rule)} {_whose(rule)}"
+
+
+def _demand(rule: Rule) -> str:
+    sides = ((rule.near_below, "down"), (rule.near, "up"))
+    near = [f"{amount(rule, level)} {way}" for level, way in sides if level is not None]
+    return f"must be {_limits(rule)}" + (f" (near from {' or from '.join(near)})" if near else "")
+
+
+def _limits(rule: Rule) -> str:
+    said = []
+    if rule.limit_below is not None:
+        said.append(f"at least {amount(rule, rule.limit_below)}")
+    if rule.limit is not None:
+        said.append(f"at most {amount(rule, rule.limit)}")
+    return " and ".join(said)
+
+
+def _whose(rule: Rule) -> str:
+    """The subjects: `of the firm`, `of book north-quay`, `of each issuer, where kind is equity`.
+
+    Any book and any instrument leave nothing out.
+    """
+    narrowed = [item for item in rule.applies_to if item.values is not None or item.tag not in ("book", "instrument")]
+    where = " and ".join(map(_selector, narrowed))
+    if rule.each:
+        return f"of each {rule.each}" + (f", where {where}," if where else "")
+    if [(item.tag, len(item.values or ()), item.negated) for item in narrowed] == [("book", 1, False)]:
+        return f"of book {(narrowed[0].values or ('',))[0]}"
+    return f"of all positions where {where}" if where else "of the firm"
+
+
+def _selector(selector: Selector) -> str:
+    if selector.values is None:
+        return f"{selector.tag} is any"
+    if len(selector.values) == 1:
+        return f"{selector.tag} is {'not ' if selector.negated else ''}{selector.values[0]}"
+    return f"{selector.tag} is {'none' if selector.negated else 'one'} of {', '.join(selector.values)}"
+
+
+def _parameters(rule: Rule) -> str:
+    """The parameters in brackets, every one with its unit; nothing for a measure without."""
+    given = rule.measure.parameters
+    said: list[str] = []
+    if "threshold" in given:
+        share = given["of"]
+        threshold = Decimal(repr(given["threshold"]))
+        size = (
+            f"{percent(threshold)}{_SHARES[Unit(f'of_{share}')]}"
+            if share
+            else f"{threshold.normalize():,f} in the subject's currency"
+        )
+        said.append(f"above {size}")
+    method = given.get("method")
+    if method:
+        said.append(_METHODS[str(method)])
+    if "confidence" in given:
+        said.append(f"confidence {percent(given['confidence'])}")
+    if "horizon_days" in given:
+        said.append("horizon " + _counted(given["horizon_days"], "day"))
+    if "window" in given:
+        said.append("window " + _counted(given["window"], "session"))
+    if method == "ewma":
+        said.append(f"decay {given['decay']}")
+    if method in ("normal", "student_t"):
+        said.append("drift " + ("as in the window" if given["drift"] == "sample" else "zero"))
+    if "basis" in given:
+        said.append(f"{given['basis']} P&L")
+    return f" ({', '.join(said)})" if said else ""
+
+
+def amount(rule: Rule, level: float) -> str:
+    """A level with its unit."""
+    exact = Decimal(repr(level))
+    if rule.unit in _SHARES:
+        return percent(exact) + _SHARES[rule.unit]
+    if rule.unit is Unit.RATIO and rule.measure.name != "leverage":
+        return percent(exact)
+    text = f"{exact:,f}".removesuffix(".0")
+    if rule.unit is Unit.AMOUNT:
+        return f"{text} {rule.currency}" if rule.currency else f"{text} in the subject's currency"
+    return text
+
+
+def percent(fraction: object) -> str:
+    return f"{(Decimal(str(fraction)) * 100).normalize():f} %"
+
+
+def _counted(count: object, word: str) -> str:
+    return f"{count} {word}" + ("" if count == 1 else "s")
+
+
+def _in_force(rule: Rule) -> str:
+    first = f", from {rule.in_force_from}" if rule.in_force_from else ""
+    last = f", up to {rule.in_force_to}" if rule.in_force_to else ""
+    return first + last

@@ -1,0 +1,1 @@
+"""Pages: one self-contained HTML file an evening, and a list of the evenings."""

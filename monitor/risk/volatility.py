@@ -1,0 +1,54 @@
+"""Volatility per session, and the same for a year."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from monitor.risk.figures import Figures, Floats, screen
+from monitor.risk.moments import mean_and_deviation
+
+
+def sample(returns: Floats) -> Figures:
+    """Standard deviation per session with denominator n - 1, in the unit of the returns.
+
+    returns: (subjects, sessions), at least 2 sessions. A row of one value has volatility 0.
+    """
+    clean, lack = screen(returns, least=2)
+    if clean.shape[1] < 2:
+        return Figures.of(np.zeros(len(clean)), lack)
+    with np.errstate(all="ignore"):
+        return Figures.of(mean_and_deviation(clean)[1], lack)
+
+
+def ewma(returns: Floats, decay: float) -> Figures:
+    """Exponentially weighted volatility, the forecast for the session after the last, in the unit of the returns.
+
+    s2(t+1) = L s2(t) + (1 - L) x(t)^2 with no mean taken off, started with the mean square of the window
+    (J.P. Morgan/Reuters 1996, RiskMetrics Technical Document, 4th ed., ch. 5). returns: (subjects, sessions), at
+    least 1. decay: L, above 0 and below 1; ValueError otherwise.
+    """
+    clean, lack = screen(returns, least=1)
+    if clean.shape[1] < 1:
+        return Figures.of(np.zeros(len(clean)), lack)
+    with np.errstate(all="ignore"):
+        return Figures.of(np.sqrt(ewma_variance(np.square(clean).mean(axis=1), clean, decay)), lack)
+
+
+def ewma_variance(start: Floats, returns: Floats, decay: float) -> Floats:
+    """Take the variance `start`, forecast for the first session, through all sessions to the one after the last.
+
+    start: (subjects,). returns: (subjects, sessions), finite. Returns (subjects,). See `ewma` for the formula.
+    """
+    if not 0 < decay < 1:
+        raise ValueError(f"the decay must be above 0 and below 1 (got {decay})")
+    n = returns.shape[1]
+    weights = (1 - decay) * decay ** np.arange(n - 1, -1, -1)
+    return np.asarray(decay**n * start + (np.square(returns) * weights).sum(axis=1))
+
+
+def annualised(volatility: Figures, days_a_year: float) -> Figures:
+    """Volatility a year from volatility a session, by the square root of time (sessions independent)."""
+    with np.errstate(all="ignore"):
+        return Figures.of(volatility.value * math.sqrt(days_a_year), volatility.lack)
