@@ -49,7 +49,7 @@ class DemoEvening:
 
 EVENTS = (
     Event(date(2025, 2, 3), "The story begins. North Quay is near its VaR limit, everything else within."),
-    Event(date(2025, 2, 11), "A holiday in Tokyo: Far East has no evening, Dublin and New York trade."),
+    Event(date(2025, 2, 11), "A holiday in Tokyo: its round has no evening, while Dublin and New York trade."),
     Event(
         date(2025, 3, 18),
         "A bad day of March 2023 has left the window of 500 sessions: the VaR of North Quay is within without a trade.",
@@ -74,7 +74,9 @@ EVENTS = (
         "Good Friday: only Tokyo trades, and the prices file never arrives. Far East stays on the closes before.",
         no_prices=True,
     ),
-    Event(date(2025, 5, 5), "A holiday in Dublin and in Tokyo: only Western has an evening."),
+    Event(
+        date(2025, 5, 5), "A holiday in Dublin and in Tokyo: only New York trades, and Western alone has new positions."
+    ),
     Event(
         date(2025, 5, 14),
         "The positions file has no row of Western: the book is missing, not flat, and the firm cannot be measured.",
@@ -143,15 +145,20 @@ EVENTS = (
     ),
     Event(
         date(2025, 11, 25),
-        "Western reduces its positions by a quarter: both excesses are cured.",
-        trades=(Resize("western", 0.75),),
+        "Western reduces its positions by three tenths: both excesses are cured.",
+        trades=(Resize("western", 0.70),),
     ),
-    Event(date(2025, 12, 25), "Christmas: only Tokyo trades, and only Far East has an evening."),
+    Event(date(2025, 12, 25), "Christmas: only Tokyo trades, and only its round has an evening."),
     Event(date(2025, 12, 31), "Tokyo is closed until 5 January; the firm is measured on Far East's last positions."),
     Event(
         date(2026, 1, 20),
         "Far East buys Hanegusa Electric up to 9.4 % of its net assets: near the limit of one position.",
         trades=(Order("far-east", "HANEGUSA", 0.094),),
+    ),
+    Event(
+        date(2026, 1, 27),
+        "North Quay puts some of its cash to work again: everything grows by a twentieth.",
+        trades=(Resize("north-quay", 1.05),),
     ),
     Event(
         date(2026, 1, 28),
@@ -160,7 +167,7 @@ EVENTS = (
     ),
     Event(
         date(2026, 2, 2),
-        "The story ends with Hanegusa Electric still over and the VaR of North Quay and of the firm near.",
+        "Shares of Dublin fall, and the VaR of North Quay is over. The story ends with it and Hanegusa Electric open.",
     ),
 )
 

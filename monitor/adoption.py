@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import hashlib
 import json
+from collections.abc import Sequence
 from datetime import datetime
 
 import monitor
@@ -14,6 +16,7 @@ from monitor.notices import outbox
 from monitor.notices.compose import compose_terms
 from monitor.reading.plain import read_yaml
 from monitor.state import State
+from monitor.world import Rule
 
 
 def adopt(state: State, now: datetime, hand: Hand) -> str:
@@ -22,14 +25,16 @@ def adopt(state: State, now: datetime, hand: Hand) -> str:
     Nothing is recorded when they are what was adopted last. Raises WrongUse when they are wrong.
     """
     site = state.site
-    rules = read_rules(site.rule_files, site.settings.rule_context())
-    settings_hash, *rule_hashes = state.archive.put_many([site.data, *(data for _, data in site.rule_files)])
-    files = tuple(NamedFile(name, sha256) for (name, _), sha256 in zip(site.rule_files, rule_hashes, strict=True))
+    settings_hash = _hash(site.data)
+    files = tuple(NamedFile(name, _hash(data)) for name, data in site.rule_files)
     signed = {"settings": settings_hash, "rules": [[file.name, file.sha256] for file in files]}
-    terms_hash = state.archive.put(json.dumps(signed, separators=(",", ":")).encode())
+    terms = json.dumps(signed, separators=(",", ":")).encode()
+    terms_hash = _hash(terms)
     last = state.last_adopted()
     if last is not None and last[0] == terms_hash:
         return terms_hash
+    rules = read_rules(site.rule_files, site.settings.rule_context())
+    state.archive.put_many([site.data, *(data for _, data in site.rule_files), terms])
     old_terms, old_settings = last or (None, None)
     with state.ledger.transaction(now) as transaction:
         if last is None:
@@ -37,19 +42,24 @@ def adopt(state: State, now: datetime, hand: Hand) -> str:
             transaction.append(SiteOpened(site.settings.site, site.settings.base_currency, program, hand))
         if old_settings != settings_hash:
             changes = _setting_changes(state.archive.get(old_settings), site.data) if old_settings else ()
-            _record(state, transaction, SettingsAdopted(settings_hash, old_settings, changes, hand))
+            _record(state, transaction, SettingsAdopted(settings_hash, old_settings, changes, hand), rules)
         changes = tuple(differences(state.terms(old_terms).rules, rules)) if old_terms else ()
-        _record(state, transaction, RulesAdopted(terms_hash, old_terms, settings_hash, files, changes, hand))
+        _record(state, transaction, RulesAdopted(terms_hash, old_terms, settings_hash, files, changes, hand), rules)
     return terms_hash
 
 
-def _record(state: State, transaction: Transaction, fact: SettingsAdopted | RulesAdopted) -> None:
+def _hash(data: bytes) -> str:
+    return hashlib.sha256(data).hexdigest()
+
+
+def _record(
+    state: State, transaction: Transaction, fact: SettingsAdopted | RulesAdopted, rules: Sequence[Rule]
+) -> None:
     """Record an adoption, and queue a notice of what it changed."""
     entry = transaction.append(fact)
     if not fact.changes:
         return
     settings = state.site.settings
-    rules = read_rules(state.site.rule_files, settings.rule_context())
     titles = {rule.id: rule.title for rule in rules}
     notices = compose_terms(settings.site, fact, titles, settings.notices.nightly_note, entry.seq, entry.hash)
     for queued in outbox.queue(notices, settings.notices, state.archive, (entry.seq, entry.hash)):

@@ -7,6 +7,7 @@ import platform
 import sqlite3
 from dataclasses import dataclass
 from datetime import date, datetime
+from functools import cache
 
 import monitor
 from monitor import evenings, results
@@ -60,8 +61,7 @@ def check_evening(state: State, terms: str, day: date, round_id: str, now: datet
 
     terms: hash of the settings and rules in force. tell: queue the evening's notices; a summary covers it otherwise.
     """
-    recipe = Recipe(day, round_id, day, day, day, rules=terms, known=state.ledger.head().seq)
-    world = build(recipe, state.sources(day))
+    world = build(_recipe(state, terms, day, round_id), state.sources(day))
     inputs = digest_inputs(world)
     earlier = evenings.latest(state.index(), day, round_id)
     if earlier is not None and earlier.inputs == inputs:
@@ -72,9 +72,19 @@ def check_evening(state: State, terms: str, day: date, round_id: str, now: datet
     return Checked(evening, standings, new=True)
 
 
+def lacks_something(state: State, terms: str, day: date, round_id: str) -> tuple[str, ...]:
+    """What an evening checked now would lack, in words."""
+    return build(_recipe(state, terms, day, round_id), state.sources(day)).lacking
+
+
 def recall(state: State, evening: CheckedEvening) -> Checked:
     """An evening as it was recorded."""
     return Checked(evening, results.decode(state.archive.get(evening.results)), new=False)
+
+
+def _recipe(state: State, terms: str, day: date, round_id: str) -> Recipe:
+    """Tonight's recipe: everything of the date itself, as known now. What arrives meanwhile waits."""
+    return Recipe(day, round_id, day, day, day, rules=terms, known=state.ledger.head().seq)
 
 
 def _record(
@@ -132,6 +142,7 @@ def _files_of(known: Known) -> tuple[UsedFile, ...]:
     )
 
 
+@cache
 def _versions() -> dict[str, str]:
     libraries = {name: importlib.metadata.version(name) for name in ("numpy", "scipy", "exchange_calendars")}
     return {"duskcheck": monitor.__version__, "python": platform.python_version(), **libraries}

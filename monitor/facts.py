@@ -249,7 +249,7 @@ class NoticeSent:
 
 @dataclass(frozen=True)
 class NoticeFailed:
-    """A try that did not succeed. `final`: it will not be tried again by itself."""
+    """A try that did not succeed. next_try: UTC text; None when it is `final` and will not be tried again by itself."""
 
     KIND: ClassVar = "notice.failed"
     V: ClassVar = 1
@@ -257,6 +257,7 @@ class NoticeFailed:
     attempt: int
     reason: str
     final: bool
+    next_try: str | None
 
 
 @dataclass(frozen=True)

@@ -87,12 +87,15 @@ def evenings_between(state: State, terms: str, first: date, last: date, round_id
 
 def check_in_order(state: State, terms: str, due: Sequence[Due], now: datetime) -> Iterator[Checked]:
     """Check evenings one after the other. Those long past are told together afterwards, by `tell_summary`."""
-    today = now.astimezone(ZoneInfo(state.site.settings.time_zone)).date()
-    firm = state.terms(terms).firm
     for evening in due:
-        business_days = sessions_of(state, terms, max(today, evening.day))[firm.calendar]
-        recent = evening.day > today or business_days.count(evening.day, today) <= OLD_AFTER
-        yield check_evening(state, terms, evening.day, evening.round, now, tell=recent)
+        yield check_evening(state, terms, evening.day, evening.round, now, is_recent(state, terms, evening, now))
+
+
+def is_recent(state: State, terms: str, due: Due, now: datetime) -> bool:
+    """Whether an evening is told by notices of its own rather than in a summary."""
+    today = now.astimezone(ZoneInfo(state.site.settings.time_zone)).date()
+    sessions = sessions_of(state, terms, max(today, due.day))[state.terms(terms).firm.calendar]
+    return due.day > today or sessions.count(due.day, today) <= OLD_AFTER
 
 
 def tell_summary(state: State, terms: str, now: datetime) -> None:

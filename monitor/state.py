@@ -26,7 +26,7 @@ from monitor.ledger.links import Head
 from monitor.limits.rules import read_rules
 from monitor.notices import outbox
 from monitor.site import Site, read_site
-from monitor.world import MeasureCall, Terms
+from monitor.world import Terms
 
 ADOPTED = "CREATE TABLE adopted (seq INTEGER PRIMARY KEY, rules TEXT NOT NULL, settings TEXT NOT NULL) STRICT"
 
@@ -130,21 +130,4 @@ def open_state(site: Site, create: bool = False) -> Iterator[State]:
 def _read_terms(signed: Signed, archive: Archive) -> Terms:
     settings = read_site("site.yaml", archive.get(signed.settings))
     rules = read_rules([(name, archive.get(sha256)) for name, sha256 in signed.rules], settings.rule_context())
-    defaults = settings.defaults
-    windows = [int(str(rule.measure.parameters["window"])) for rule in rules if "window" in rule.measure.parameters]
-    tail = {
-        "method": "historical",
-        "confidence": defaults.confidence,
-        "horizon_days": 1,
-        "window": defaults.window,
-        "drift": "zero",
-    }
-    return Terms(
-        firm=settings.firm(),
-        rounds={each.id: each.books for each in settings.rounds},
-        rules=rules,
-        longest_window=max([defaults.window, *windows]),
-        days_a_year=defaults.days_a_year,
-        nav_age=defaults.nav_age,
-        default_tail=MeasureCall("value_at_risk", tail),
-    )
+    return settings.terms(rules)

@@ -7,7 +7,6 @@ from pathlib import Path
 import click
 
 from monitor.cli.options import site_option
-from monitor.site import open_site
 
 
 @click.command()
@@ -16,4 +15,4 @@ def daemon(site_file: Path) -> int:
     """Check evenings on schedule in the foreground, until SIGTERM or SIGINT. Logs to stderr."""
     from monitor.daemon.serve import serve
 
-    return serve(open_site(site_file))
+    return serve(site_file)

@@ -15,7 +15,7 @@ from datetime import date
 import numpy as np
 
 from monitor.words import WrongUse
-from monitor.world import Days
+from monitor.world import Booleans, Days
 
 FIRST = date(1990, 1, 1)  # exchange_calendars tests its answers from 1990 on
 
@@ -40,6 +40,11 @@ class Sessions:
     def open_on(self, day: date) -> bool:
         past = self.up_to(day)
         return bool(len(past)) and _date(past[-1]) == day
+
+    def open_on_each(self, days: Days) -> Booleans:
+        """For each of some ascending days whether it is a session."""
+        places = np.minimum(np.searchsorted(self.days, days), len(self.days) - 1)
+        return np.asarray(self.days[places] == days)
 
     def last(self, day: date) -> date:
         """The newest session on or before a day."""

@@ -64,7 +64,7 @@ def cut_window(
     """The closes and rates on the sessions of one calendar. calendars: the name of each instrument's own."""
     ordinals = _ordinals(sessions)
     rows, rate_rows = _row_of(grid.days, ordinals), _row_of(grid.rate_days, ordinals)
-    own_open = {name: np.isin(sessions, own[name].days) for name in set(calendars)}
+    own_open = {name: own[name].open_on_each(sessions) for name in set(calendars)}
     opened = np.array([own_open[name] for name in calendars], dtype=np.bool_).reshape(len(calendars), len(sessions))
     given_today = grid.given[rows] & (grid.days[rows] == ordinals)[:, None]
     return Window(calendar, sessions, grid.close[rows].T.copy(), grid.rate[rate_rows].T.copy(), opened & ~given_today.T)

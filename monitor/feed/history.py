@@ -74,12 +74,10 @@ class History:
         )
         return found
 
-    def seen(self, name: str, size: int, changed: int) -> str | None:
-        """The hash of a file in the drop, if it was hashed with this size and time of change."""
-        row = self._db.execute(
-            "SELECT sha256 FROM seen WHERE name = ? AND size = ? AND changed = ?", (name, size, changed)
-        ).fetchone()
-        return row[0] if row else None
+    def seen(self) -> dict[tuple[str, int, int], str]:
+        """The hashes of the files in the drop that were hashed before, by name, size and time of change."""
+        rows = self._db.execute("SELECT name, size, changed, sha256 FROM seen")
+        return {(name, size, changed): sha256 for name, size, changed, sha256 in rows}
 
     def remember_seen(self, name: str, size: int, changed: int, sha256: str) -> None:
         self._db.execute("INSERT OR REPLACE INTO seen VALUES (?, ?, ?, ?)", (name, size, changed, sha256))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import os
 import sqlite3
 import stat
 from collections.abc import Callable, Iterator, Mapping
@@ -12,7 +13,7 @@ from pathlib import Path
 from monitor.facts import FileAccepted, FileRefused
 from monitor.feed.history import History
 from monitor.feed.kinds import Panel, Vocabulary, parse
-from monitor.feed.known import in_effect, refused_before
+from monitor.feed.known import decisions
 from monitor.feed.names import UNFINISHED, Name, comes_later, read_name
 from monitor.feed.tables import MOST_FINDINGS
 from monitor.words import FileKind, Finding, WrongUse
@@ -20,9 +21,10 @@ from monitor.words import FileKind, Finding, WrongUse
 
 @dataclass(frozen=True)
 class Lying:
-    """A file in the drop as one look found it. changed: nanoseconds."""
+    """A file in the drop as one look found it. changed: nanoseconds. name: as it can be recorded, in UTF-8."""
 
     path: Path
+    name: str
     size: int
     changed: int
     regular: bool
@@ -53,7 +55,7 @@ def look(drop: Path) -> list[Lying]:
             about = path.lstat()
         except FileNotFoundError:  # taken away between the two looks
             continue
-        found.append(Lying(path, about.st_size, about.st_mtime_ns, stat.S_ISREG(about.st_mode)))
+        found.append(Lying(path, _recordable(path.name), about.st_size, about.st_mtime_ns, stat.S_ISREG(about.st_mode)))
     return found
 
 
@@ -69,18 +71,20 @@ def take(
 
     The caller records the facts, and then calls `remember` for each.
     """
+    decided = decisions(index)
+    seen = history.seen()
     for file in lying:
-        name = read_name(file.path.name, patterns)
-        sha256 = history.seen(file.path.name, file.size, file.changed)
-        if sha256 is not None and _decided(index, file, name, sha256):
+        name = read_name(file.name, patterns)
+        identity = (name.kind, name.source, name.day) if name else None
+        known = seen.get((file.name, file.size, file.changed))
+        if known is not None and decided.stands(file.name, identity, known):
             continue
         data, trouble = _read(file)
         sha256 = hashlib.sha256(data).hexdigest() if data is not None else None
-        if _decided(index, file, name, sha256):
-            if sha256 is not None:
-                history.remember_seen(file.path.name, file.size, file.changed, sha256)
-            continue
-        yield _decide(file, name, data, trouble, put, words)
+        if not decided.stands(file.name, identity, sha256):
+            yield _decide(file, name, data, trouble, put, words)
+        elif sha256 is not None:
+            history.remember_seen(file.name, file.size, file.changed, sha256)
 
 
 def remember(taken: Taken, history: History) -> None:
@@ -88,23 +92,21 @@ def remember(taken: Taken, history: History) -> None:
     if taken.panel is not None and taken.fact.sha256 is not None:
         history.keep(taken.fact.sha256, taken.panel)
     if taken.fact.sha256 is not None:
-        history.remember_seen(taken.lying.path.name, taken.lying.size, taken.lying.changed, taken.fact.sha256)
+        history.remember_seen(taken.lying.name, taken.lying.size, taken.lying.changed, taken.fact.sha256)
 
 
-def _decided(index: sqlite3.Connection, file: Lying, name: Name | None, sha256: str | None) -> bool:
-    if name and sha256 and in_effect(index, name.kind, name.source, name.day) == sha256:
-        return True
-    return refused_before(index, file.path.name, sha256)
+def _recordable(name: str) -> str:
+    return os.fsencode(name).decode("utf-8", "replace")
 
 
 def _read(file: Lying) -> tuple[bytes | None, Finding | None]:
     if not file.regular:
-        return None, Finding(file.path.name, None, None, "a folder, link or special file", "a regular file")
+        return None, Finding(file.name, None, None, "a folder, link or special file", "a regular file")
     try:
         return file.path.read_bytes(), None
     except OSError as error:
         found = f"a file that cannot be read ({error.strerror})"
-        return None, Finding(file.path.name, None, None, found, "a readable file", "Check its owner and permissions.")
+        return None, Finding(file.name, None, None, found, "a readable file", "Check its owner and permissions.")
 
 
 def _decide(
@@ -118,13 +120,13 @@ def _decide(
     if data is None:
         return Taken(file, _refusal(file, name, None, (trouble,) if trouble else ()))
     if name is None:
-        return Taken(file, _refusal(file, None, put(data), (_unnamed(file.path.name),)))
-    parsed = parse(name.kind, file.path.name, data, name.day, words)
+        return Taken(file, _refusal(file, None, put(data), (_unnamed(file.name),)))
+    parsed = parse(name.kind, file.name, data, name.day, words)
     sha256 = put(data)
     if parsed.findings:
         return Taken(file, _refusal(file, name, sha256, parsed.findings))
     accepted = FileAccepted(
-        name=file.path.name,
+        name=file.name,
         file=name.kind,
         source=name.source,
         day=name.day,
@@ -139,7 +141,7 @@ def _decide(
 
 def _refusal(file: Lying, name: Name | None, sha256: str | None, findings: tuple[Finding, ...]) -> FileRefused:
     return FileRefused(
-        name=file.path.name,
+        name=file.name,
         file=name.kind if name else None,
         source=name.source if name else "",
         day=name.day if name else None,

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import sqlite3
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from datetime import date
 
@@ -85,22 +85,32 @@ class Known:
             yield from self.files(kind)
 
 
-def in_effect(index: sqlite3.Connection, kind: FileKind, source: str, day: date | None) -> str | None:
-    """The hash of the file that counts now for an identity."""
-    row = index.execute(
-        "SELECT sha256 FROM accepted WHERE kind = ? AND source = ? AND day = ? ORDER BY seq DESC LIMIT 1",
-        (kind, source, _text(day)),
-    ).fetchone()
-    return row[0] if row else None
+@dataclass(frozen=True)
+class Decisions:
+    """What was decided last. in_effect: hash by kind, source and day. refused: hash by name, of files not mended."""
+
+    in_effect: Mapping[tuple[str, str, str], str]
+    refused: Mapping[str, str | None]
+
+    def stands(self, name: str, identity: tuple[FileKind, str, date | None] | None, sha256: str | None) -> bool:
+        """Whether this very content was decided about under this name."""
+        if identity is not None and sha256 is not None:
+            kind, source, day = identity
+            if self.in_effect.get((kind, source, _text(day))) == sha256:
+                return True
+        return name in self.refused and self.refused[name] == sha256
 
 
-def refused_before(index: sqlite3.Connection, name: str, sha256: str | None) -> bool:
-    """Whether this very content was the last thing refused under this name, and nothing accepted since."""
-    row = index.execute("SELECT seq, sha256 FROM refused WHERE name = ? ORDER BY seq DESC LIMIT 1", (name,)).fetchone()
-    if row is None or row[1] != sha256:
-        return False
-    later = index.execute("SELECT 1 FROM accepted WHERE name = ? AND seq > ?", (name, row[0])).fetchone()
-    return later is None
+def decisions(index: sqlite3.Connection) -> Decisions:
+    accepted = index.execute("SELECT kind, source, day, sha256, MAX(seq) FROM accepted GROUP BY kind, source, day")
+    refused = index.execute(
+        "SELECT name, sha256 FROM (SELECT name, sha256, MAX(seq) AS last FROM refused GROUP BY name) AS r"
+        " WHERE NOT EXISTS (SELECT 1 FROM accepted AS a WHERE a.name = r.name AND a.seq > r.last)"
+    )
+    return Decisions(
+        {(kind, source, day): sha256 for kind, source, day, sha256, _ in accepted},
+        dict(refused.fetchall()),
+    )
 
 
 def _day(text: str) -> date | None:

@@ -7,6 +7,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import date
 from fnmatch import translate
+from functools import cache
 
 from monitor.feed.tables import read_day
 from monitor.words import FileKind
@@ -37,8 +38,7 @@ class Name:
 def read_name(name: str, patterns: Mapping[FileKind, str]) -> Name | None:
     """The kind, source and date of a name; None when it fits no pattern. Each file of a `*` pattern is a source."""
     for kind, pattern in patterns.items():
-        shape = translate(pattern).replace(r"\{date\}", r"(?P<date>\d{4}-\d{2}-\d{2})")
-        found = re.fullmatch(shape, name)
+        found = _shape(pattern).fullmatch(name)
         if found is None:
             continue
         if "{date}" not in pattern:
@@ -46,6 +46,11 @@ def read_name(name: str, patterns: Mapping[FileKind, str]) -> Name | None:
         day = read_day(found["date"])
         return Name(kind, MAIN, day) if day else None
     return None
+
+
+@cache
+def _shape(pattern: str) -> re.Pattern[str]:
+    return re.compile(translate(pattern).replace(r"\{date\}", r"(?P<date>\d{4}-\d{2}-\d{2})"))
 
 
 def comes_later(name: str) -> bool:

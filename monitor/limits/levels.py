@@ -73,6 +73,7 @@ def _check_order(
     for near, limit in (("near", "limit"), ("near_below", "limit_below")):
         if near in values and limit not in values:
             document.refuse((*path, keys[near]), f"`{limit}` beside it", f"`{near}` without `{limit}`", at_key=True)
+            return
     for lower, upper in _BELOW:
         if lower in values and upper in values and values[lower] >= values[upper]:
             at = keys[lower] if lower.startswith("near") else keys[upper]

@@ -5,7 +5,7 @@ from __future__ import annotations
 import threading
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
-from datetime import datetime
+from datetime import datetime, timedelta
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -55,11 +55,15 @@ class Receipt:
 
 
 class Retry(Exception):
-    """Not taken now; a later try may succeed. `unreachable`: nothing else need be tried on this channel just now."""
+    """Not taken now; a later try may succeed. `unreachable`: nothing else need be tried on this channel just now.
 
-    def __init__(self, reason: str, unreachable: bool = False) -> None:
+    after: how long the receiver asked to be left alone.
+    """
+
+    def __init__(self, reason: str, unreachable: bool = False, after: timedelta = timedelta(0)) -> None:
         super().__init__(reason)
         self.unreachable = unreachable
+        self.after = after
 
 
 class Final(Exception):

@@ -65,12 +65,16 @@ class Waiting:
 
 @dataclass(frozen=True)
 class Result:
-    """What became of one try. `said` is the receipt, or the reason; `final`: there will be no further try."""
+    """What became of one try. `said` is the receipt, or the reason; `final`: there will be no further try.
+
+    next_try: UTC text, None when there is none.
+    """
 
     notice: Waiting
     sent: bool
     final: bool
     said: str
+    next_try: str | None = None
 
 
 def queue(
@@ -139,13 +143,17 @@ def drain(
         except Retry as error:
             if error.unreachable:
                 unreachable.add(row.channel)
-            result = Result(row, sent=False, final=attempt > len(WAITS), said=str(error))
+            final = attempt > len(WAITS)
+            wait = max(WAITS[min(attempt, len(WAITS)) - 1], error.after)
+            result = Result(
+                row, sent=False, final=final, said=str(error), next_try=None if final else _text(now + wait)
+            )
         else:
             result = Result(row, sent=True, final=True, said=receipt.text)
         fact = (
             NoticeSent(row.id, attempt, result.said)
             if result.sent
-            else NoticeFailed(row.id, attempt, result.said, result.final)
+            else NoticeFailed(row.id, attempt, result.said, result.final, result.next_try)
         )
         with ledger.transaction(now) as transaction:
             transaction.append(fact)
@@ -250,12 +258,9 @@ def _apply(connection: sqlite3.Connection, entry: Entry) -> None:
             )
         case NoticeSent():
             _set(connection, fact.id, fact.attempt, None, "sent", fact.receipt)
-        case NoticeFailed(final=True):
-            _set(connection, fact.id, fact.attempt, None, "failed", fact.reason)
         case NoticeFailed():
-            wait = WAITS[min(fact.attempt, len(WAITS)) - 1]
-            again = _text(datetime.fromisoformat(entry.at) + wait)
-            _set(connection, fact.id, fact.attempt, again, "pending", fact.reason)
+            state = "failed" if fact.final else "pending"
+            _set(connection, fact.id, fact.attempt, fact.next_try, state, fact.reason)
 
 
 def _set(

@@ -6,7 +6,8 @@ import base64
 import binascii
 import hashlib
 import hmac
-from datetime import datetime
+import re
+from datetime import datetime, timedelta
 
 import requests
 
@@ -26,7 +27,7 @@ def deliver(channel: WebhookChannel, envelope: Envelope, now: datetime, around: 
     if channel.secret:
         secret = plain_text(channel.secret, around)
         headers["webhook-signature"] = signature(secret, envelope.id, headers["webhook-timestamp"], body)
-    status = within(channel.timeout_seconds, lambda: _post(url, headers, body, channel.timeout_seconds))
+    status, after = within(channel.timeout_seconds, lambda: _post(url, headers, body, channel.timeout_seconds))
     if 200 <= status < 300:
         return Receipt(f"HTTP {status}")
     if 300 <= status < 400:
@@ -34,7 +35,12 @@ def deliver(channel: WebhookChannel, envelope: Envelope, now: datetime, around: 
         raise Retry(f"HTTP {status}: the receiver sends elsewhere, and redirects are not followed; name its own URL")
     if status == _GONE:
         raise Final(f"HTTP {status}: the receiver wants no more notices")
-    raise Retry(f"HTTP {status}")
+    raise Retry(f"HTTP {status}", after=_patience(after))
+
+
+def _patience(text: str) -> timedelta:
+    """The seconds of a Retry-After header (RFC 9110, section 10.2.3), a day at most; none for a date or nonsense."""
+    return min(timedelta(seconds=int(text)), timedelta(days=1)) if re.fullmatch(r"\d{1,9}", text) else timedelta(0)
 
 
 def signature(secret: str, message_id: str, timestamp: str, body: bytes) -> str:
@@ -47,15 +53,18 @@ def signature(secret: str, message_id: str, timestamp: str, body: bytes) -> str:
     return "v1," + base64.b64encode(hmac.new(key, signed, hashlib.sha256).digest()).decode()
 
 
-def _post(url: str, headers: dict[str, str], body: bytes, timeout: float) -> int:
-    """The status of the answer, whose body is not read. No proxy, no .netrc, no redirect, no second try of its own."""
+def _post(url: str, headers: dict[str, str], body: bytes, timeout: float) -> tuple[int, str]:
+    """The status of the answer, whose body is not read, and its Retry-After.
+
+    No proxy, no .netrc, no redirect, no second try of its own.
+    """
     with requests.Session() as session:
         session.trust_env = False
         try:
             with session.post(
                 url, data=body, headers=headers, timeout=timeout, allow_redirects=False, stream=True
             ) as answer:
-                return answer.status_code
+                return answer.status_code, answer.headers.get("Retry-After", "")
         except requests.RequestException as error:
             # Not the error's own words: they repeat the URL, which may hold a token.
             raise Retry(f"{_KINDS.get(type(error), 'no talk with the receiver')}{_cause(error)}", True) from None

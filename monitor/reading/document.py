@@ -148,8 +148,6 @@ class Document:
                 self.refuse(path, f"the key {key!r}", f"a mapping without {key!r}")
             elif place not in self.doubtful:
                 self.refuse(place, problem.expected, problem.found, problem.remedy, problem.near)
-        for problem in []:
-            self.doubtful.add((*path, problem.at[0]))
         return made
 
     def refuse_doubled_ids(self, path: Path) -> None:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import os
 import sqlite3
+import sys
 from collections.abc import Iterator, Mapping
 from contextlib import closing, contextmanager
 from dataclasses import fields, is_dataclass
@@ -12,6 +14,7 @@ from pathlib import Path
 from types import NoneType
 from typing import Any, get_args, get_origin, get_type_hints
 
+import monitor
 from monitor.facts import FACTS, Fact
 from monitor.ledger.archive import Archive
 from monitor.ledger.chain import Ledger
@@ -96,3 +99,8 @@ def tampering(path: Path) -> Iterator[sqlite3.Connection]:
 def rows_of(path: Path) -> list[tuple[int, bytes, str]]:
     with closing(sqlite3.connect(path)) as connection:
         return connection.execute("SELECT seq, bytes, hash FROM entries ORDER BY seq").fetchall()
+
+
+def environment() -> dict[str, str]:
+    """For a Python started by a test: it finds the same packages, from whatever folder."""
+    return {**os.environ, "PYTHONPATH": os.pathsep.join([str(Path(monitor.__file__).parents[1]), *sys.path])}

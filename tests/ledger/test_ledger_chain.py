@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import json
-import os
-import resource
 import sqlite3
 import struct
+import subprocess
+import sys
 from contextlib import closing
 from datetime import UTC, datetime, timedelta, timezone
 from pathlib import Path
@@ -15,7 +15,7 @@ import pytest
 import rfc8785
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from ledger_samples import NOON, every_fact, make_ledger, rows_of, sample, tampering
+from ledger_samples import NOON, environment, every_fact, make_ledger, rows_of, sample, tampering
 
 from monitor import facts
 from monitor.facts import ClockOdd, DaemonStopped, EveningMissed, Fact, NoticeSent
@@ -400,19 +400,24 @@ def test_a_write_that_the_system_refuses_is_told_and_leaves_nothing_half_written
     ledger.close()
     told = tmp_path / "told"
 
-    child = os.fork()
-    if child == 0:
-        try:
-            with Ledger.open(path) as limited:
-                size = path.stat().st_size
-                resource.setrlimit(resource.RLIMIT_FSIZE, (size, size))
-                try:
-                    append(limited, EveningMissed(sample(EveningMissed).day, "asia", "x" * 200_000))
-                except DuskcheckError as error:
-                    told.write_text(str(error), encoding="utf-8")
-        finally:
-            os._exit(0)
-    os.waitpid(child, 0)
+    script = """
+import resource, sys
+from pathlib import Path
+from ledger_samples import NOON
+from monitor.facts import DaemonStopped
+from monitor.ledger.chain import Ledger
+from monitor.words import DuskcheckError
+
+path, told = map(Path, sys.argv[1:])
+with Ledger.open(path) as ledger:
+    resource.setrlimit(resource.RLIMIT_FSIZE, (path.stat().st_size,) * 2)
+    try:
+        with ledger.transaction(NOON) as transaction:
+            transaction.append(DaemonStopped("x" * 200_000, 7))
+    except DuskcheckError as error:
+        told.write_text(str(error)[:path.stat().st_size], encoding="utf-8")
+"""
+    subprocess.run([sys.executable, "-c", script, path, told], check=True, env=environment())
 
     assert "Check the disk's free space" in told.read_text(encoding="utf-8")
     assert verify(path).problems == ()

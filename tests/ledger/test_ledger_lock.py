@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import os
-import signal
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
+from ledger_samples import environment
 
 from monitor.ledger import lock as module
 from monitor.ledger.lock import lock
@@ -18,26 +20,25 @@ def path(tmp_path: Path) -> Path:
     return tmp_path / "state" / "evening.lock"
 
 
-def hold_in_a_child(path: Path) -> int:
-    """A process that holds the lock until it is killed."""
-    ready, tell = os.pipe()
-    child = os.fork()
-    if child == 0:
-        try:
-            with lock(path):
-                os.write(tell, b"x")
-                signal.pause()
-        finally:
-            os._exit(1)
-    os.close(tell)
-    assert os.read(ready, 1) == b"x"
-    os.close(ready)
-    return child
+HOLDER = """
+import signal, sys
+from pathlib import Path
+from monitor.ledger.lock import lock
+
+with lock(Path(sys.argv[1])):
+    print("held", flush=True)
+    signal.pause()
+"""
 
 
-def end(child: int) -> None:
-    os.kill(child, signal.SIGKILL)
-    os.waitpid(child, 0)
+@pytest.fixture
+def holder(path: Path):
+    """Another process that holds the lock until it is killed."""
+    command = [sys.executable, "-c", HOLDER, path]
+    with subprocess.Popen(command, stdout=subprocess.PIPE, env=environment()) as process:
+        assert process.stdout.readline() == b"held\n"
+        yield process
+        process.kill()
 
 
 def test_the_second_is_told_who_holds_it_and_since_when(path):
@@ -72,25 +73,24 @@ def test_it_can_be_taken_again_after_it_was_given_back_and_the_file_stays(path):
         pass
 
 
-def test_another_process_holds_it_until_it_is_killed(path):
-    child = hold_in_a_child(path)
-    try:
-        with pytest.raises(Busy, match=f"process {child} on "), lock(path):
-            pytest.fail("it was taken twice")
-    finally:
-        end(child)
+def test_another_process_holds_it_until_it_is_killed(path, holder):
+    with pytest.raises(Busy, match=f"process {holder.pid} on "), lock(path):
+        pytest.fail("it was taken twice")
+
+    holder.kill()
+    holder.wait()
 
     with lock(path):
         pass
 
 
-def test_waiting_takes_it_as_soon_as_it_is_free(path, monkeypatch):
-    child = hold_in_a_child(path)
+def test_waiting_takes_it_as_soon_as_it_is_free(path, holder, monkeypatch):
     pauses = []
 
     def pause(seconds: float) -> None:
         pauses.append(seconds)
-        end(child)
+        holder.kill()
+        holder.wait()
 
     monkeypatch.setattr(module.time, "sleep", pause)
 

@@ -150,7 +150,9 @@ def test_a_sent_notice_stays_sent_whatever_comes_after(office: Office) -> None:
 
     office.queue([notice()], known)
     with office.ledger.transaction(NOW) as transaction:  # another process tried at the same time, and failed
-        transaction.append(NoticeFailed(fact.id, 1, "the disk is full", final=False))
+        transaction.append(
+            NoticeFailed(fact.id, 1, "the disk is full", final=False, next_try="2026-03-13T00:00:00.000Z")
+        )
 
     assert [row.state for row in office.rows()] == ["sent"]
     assert office.drain(known, NOW + timedelta(days=1)) == []

@@ -95,9 +95,10 @@ def test_full_site_says_what_it_says() -> None:
 
 
 def test_terms_hold_the_rounds_in_the_order_of_the_day() -> None:
-    terms = read_site("site.yaml", FULL.encode()).terms(())
+    later = FULL.replace('at: "18:00"', 'at: "20:00"').replace('give_up_at: "20:00"', 'give_up_at: "21:00"')
+    terms = read_site("site.yaml", later.encode()).terms(())
 
-    assert list(terms.rounds) == ["asia", "europe"]  # 18:00 in Tokyo is 09:00 UTC
+    assert list(terms.rounds) == ["asia", "europe"]  # 20:00 in Tokyo is 11:00 UTC, before 19:15 in Dublin
     assert (terms.longest_window, terms.days_a_year, terms.nav_age) == (500, 252, 2)
     assert terms.default_tail.parameters["confidence"] == Decimal("0.99")
 

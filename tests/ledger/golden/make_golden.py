@@ -234,8 +234,14 @@ EVENING: tuple[Fact, ...] = (
 )
 
 AFTER: tuple[Fact, ...] = (
-    NoticeFailed(id="n-1", attempt=1, reason="the server refused: 451 4.7.1 try later", final=False),
-    NoticeFailed(id="n-1", attempt=2, reason="no such mailbox", final=True),
+    NoticeFailed(
+        id="n-1",
+        attempt=1,
+        reason="the server refused: 451 4.7.1 try later",
+        final=False,
+        next_try="2026-03-12T20:20:02.500Z",
+    ),
+    NoticeFailed(id="n-1", attempt=2, reason="no such mailbox", final=True, next_try=None),
     NoticeSent("n-2", 1, "tray/2026-12-01-n-2.eml"),
     EveningMissed(date(2026, 12, 2), "asia", "no positions came before 20:00"),
     ExcessChanged(
