@@ -181,14 +181,22 @@ class ExcessOpened:
 
 @dataclass(frozen=True)
 class ExcessChanged:
-    """What the register holds of an excess from now on: another evening over, or other dates after a correction."""
+    """What the register holds of an excess from now on: another evening over, or other dates after a correction.
+
+    side, unit, currency, owner: as its rule has them by now. An excess that had been cured is no longer.
+    """
 
     KIND: ClassVar = "excess.changed"
     V: ClassVar = 1
     excess: str
     day: date
     state: ExcessState
+    side: Side
+    unit: Unit
+    currency: str | None
+    owner: str | None
     opened_on: date
+    opened_value: float
     last_on: date
     last_value: float
     level: float

@@ -9,7 +9,7 @@ from datetime import date
 from monitor.excesses.register import Excess
 from monitor.excesses.step import Evening, Held, compare, step
 from monitor.facts import ExcessChanged, ExcessCured, ExcessOpened, ExcessVoided
-from monitor.words import Recipe, Side, SubjectKind
+from monitor.words import CuredBy, ExcessState, Recipe, Side, SubjectKind
 from monitor.world import Answer, Rule, Standings, Terms
 
 ExcessFact = ExcessOpened | ExcessChanged | ExcessCured | ExcessVoided
@@ -17,30 +17,32 @@ ExcessFact = ExcessOpened | ExcessChanged | ExcessCured | ExcessVoided
 
 @dataclass(frozen=True)
 class Settled:
-    """The facts to append, and the excesses they are about. alive: open or waived after the evening."""
+    """The facts to append, and the excesses that somebody must be told of.
+
+    opened: those new on record, cured ones among them. cured: whose cure is new, or of another day or cause than was
+    recorded. reopened: recorded as cured, and alive. voided: with the reason. alive: open or waived after the evening.
+    """
 
     facts: tuple[ExcessFact, ...]
     opened: tuple[Excess, ...]
     cured: tuple[Excess, ...]
+    reopened: tuple[Excess, ...]
     voided: tuple[Excess, ...]
     alive: tuple[Excess, ...]
 
 
-def as_evening(recipe: Recipe, standings: Standings, terms: Terms, completes: bool) -> Evening:
+def as_evening(recipe: Recipe, standings: Standings, terms: Terms) -> Evening:
     """An evening as the register sees it."""
     rules = {rule.id: rule for rule in terms.rules}
-    in_force = [rule.id for rule in terms.rules if is_in_force(rule, recipe.date)]
+    missing = {gap.subject.book for gap in standings.unmeasured if gap.subject.kind is SubjectKind.BOOK}
     return Evening(
         day=recipe.date,
         held=tuple(_held(answer, rules) for answer in standings.answers),
-        rules=frozenset(in_force),
-        books=frozenset(terms.rounds[recipe.round]),
-        completes=completes,
-        missing=frozenset(
-            gap.subject.book
-            for gap in standings.unmeasured
-            if gap.subject.kind is SubjectKind.BOOK and gap.subject.book
-        ),
+        rules=frozenset(rule.id for rule in terms.rules if is_in_force(rule, recipe.date)),
+        site_books=frozenset(book.id for book in terms.firm.books),
+        known=frozenset(terms.rounds[recipe.round]) - missing,
+        # The gross exposure of the whole is known only when that of every position is.
+        whole=frozenset(own.subject.book for own in standings.books if own.gross is not None),
     )
 
 
@@ -65,7 +67,7 @@ def settle_newest(register: Sequence[Excess], evening: Evening, ids: Iterable[st
         elif excess != old:
             facts.append(_changed(excess, evening.day, "over again"))
     alive = tuple(excess for excess in after if excess.alive)
-    return Settled(tuple(facts), tuple(opened), tuple(cured), (), alive)
+    return Settled(tuple(facts), tuple(opened), tuple(cured), (), (), alive)
 
 
 def settle_again(register: Sequence[Excess], evenings: Iterable[Evening], day: date, ids: Iterable[str]) -> Settled:
@@ -73,27 +75,50 @@ def settle_again(register: Sequence[Excess], evenings: Iterable[Evening], day: d
 
     evenings: every evening on record in business-date order, in its latest edition, tonight's among them.
     """
+    before = {excess.id: excess for excess in register}
     expected: tuple[Excess, ...] = ()
-    numbers = iter(ids)
+    openings: dict[str, Excess] = {}
     for evening in evenings:
         expected = step(expected, evening, _provisional(expected))
+        openings |= {excess.id: excess for excess in expected[len(openings) :]}
     found = compare(register, expected)
-    named = {excess.id: next(numbers) for excess in found.opened}
-    opened = tuple(_renamed(excess, named) for excess in found.opened)
-    cured = tuple(_renamed(excess, named) for excess in found.cured)
-    reason = f"the evening of {day} was checked again, and this was not over"
+    names = dict(zip((excess.id for excess in found.opened), ids, strict=False))
+    opened, cured, alive = (_named(excesses, names) for excesses in (found.opened, found.cured, found.alive))
+    first = _named((openings[excess.id] for excess in found.opened), names)
+    voided = tuple(
+        replace(excess, state=ExcessState.VOID, void_reason=_void_reason(day, whole, names))
+        for excess, whole in found.voided
+    )
     facts: list[ExcessFact] = [
-        *(ExcessVoided(excess.id, day, reason) for excess in found.voided),
-        *(_opened(excess) for excess in opened),
-        *(_changed(excess, day, "opened") for excess in opened if excess.last_on != excess.opened_on),
-        *(_changed(excess, day, "corrected") for excess in found.changed),
+        *(ExcessVoided(excess.id, day, excess.void_reason or "") for excess in voided),
+        *(_opened(excess) for excess in first),
+        *(
+            _changed(excess, day, "over again up to this day")
+            for excess, opening in zip(opened, first, strict=True)
+            if excess.last_on != opening.last_on
+        ),
+        *(_changed(excess, day, f"corrected by the check of {day}") for excess in found.changed),
         *(_cured(excess) for excess in cured),
     ]
-    recorded = {excess.id for excess in found.voided}
-    kept = {excess.id: excess for excess in register if excess.id not in recorded}
-    kept |= {excess.id: excess for excess in (*opened, *found.changed, *cured)}
-    alive = tuple(excess for excess in kept.values() if excess.alive)
-    return Settled(tuple(facts), opened, cured, found.voided, alive)
+    return Settled(
+        facts=tuple(facts),
+        opened=opened,
+        cured=tuple(excess for excess in cured if _ended(excess) != _ended(before.get(excess.id))),
+        reopened=tuple(excess for excess in found.changed if excess.alive and not before[excess.id].alive),
+        voided=voided,
+        alive=alive,
+    )
+
+
+def _ended(excess: Excess | None) -> tuple[date | None, CuredBy | None]:
+    return (excess.cured_on, excess.cured_by) if excess else (None, None)
+
+
+def _void_reason(day: date, whole: Excess | None, names: Mapping[str, str]) -> str:
+    if whole is None:
+        return f"the check of {day} shows that it was not over"
+    name = names.get(whole.id, whole.id)
+    return f"the check of {day} shows that it was over before too: it is a part of {name}, opened on {whole.opened_on}"
 
 
 def _provisional(register: Sequence[Excess]) -> Iterator[str]:
@@ -103,8 +128,8 @@ def _provisional(register: Sequence[Excess]) -> Iterator[str]:
         yield f"new{number}"
 
 
-def _renamed(excess: Excess, names: Mapping[str, str]) -> Excess:
-    return replace(excess, id=names.get(excess.id, excess.id))
+def _named(excesses: Iterable[Excess], names: Mapping[str, str]) -> tuple[Excess, ...]:
+    return tuple(replace(excess, id=names.get(excess.id, excess.id)) for excess in excesses)
 
 
 def _held(answer: Answer, rules: Mapping[str, Rule]) -> Held:
@@ -125,8 +150,7 @@ def _held(answer: Answer, rules: Mapping[str, Rule]) -> Held:
 
 
 def _opened(excess: Excess) -> ExcessOpened:
-    """How the excess opened; a worse day that a fold over several evenings found stands in a change after it."""
-    distance = excess.opened_value - excess.level if excess.side is Side.ABOVE else excess.level - excess.opened_value
+    """How the excess opened, from what it was on that evening."""
     return ExcessOpened(
         excess=excess.id,
         rule=excess.rule,
@@ -135,7 +159,7 @@ def _opened(excess: Excess) -> ExcessOpened:
         side=excess.side,
         value=excess.opened_value,
         level=excess.level,
-        distance=distance,
+        distance=excess.worst_distance,
         unit=excess.unit,
         currency=excess.currency,
         owner=excess.owner,
@@ -147,7 +171,12 @@ def _changed(excess: Excess, day: date, reason: str) -> ExcessChanged:
         excess=excess.id,
         day=day,
         state=excess.state,
+        side=excess.side,
+        unit=excess.unit,
+        currency=excess.currency,
+        owner=excess.owner,
         opened_on=excess.opened_on,
+        opened_value=excess.opened_value,
         last_on=excess.last_on,
         last_value=excess.last_value,
         level=excess.level,

@@ -122,10 +122,13 @@ class Subject:
 
     @property
     def name(self) -> str:
-        """The key as a reader says it."""
+        """The key as a reader says it: `north-quay/ARDNAVALE`, `book far-east, kind equity or fund`."""
         if self.kind is SubjectKind.FIRM:
             return "the firm"
-        return self.key.partition(":")[2]
+        told = self.key.partition(":")[2]
+        if self.kind is SubjectKind.GROUP:
+            return told.replace("; ", ", ").replace("=", " ").replace("|", " or ")
+        return told
 
 
 @dataclass(frozen=True)

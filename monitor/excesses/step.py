@@ -2,12 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection, Iterable, Mapping
+from collections.abc import Collection, Iterable
 from dataclasses import dataclass, replace
 from datetime import date
 
 from monitor.excesses.register import Excess
-from monitor.words import CuredBy, ExcessState, Side, Standing, Subject, Unit
+from monitor.words import CuredBy, ExcessState, Side, Standing, Subject, SubjectKind, Unit
 
 
 @dataclass(frozen=True)
@@ -31,22 +31,28 @@ class Held:
 class Evening:
     """One evening as the register sees it.
 
-    rules: the ids of the rules in force, of which a subject not answered for is no more. books: those of the round.
-    missing: books whose positions are not known, of which no subject is known to have ended.
+    rules: the ids of the rules in force. site_books: all books of the site. known: the books of the round whose
+    positions are known. whole: those of them, and None for the firm, whose every position was described and valued.
     """
 
     day: date
     held: tuple[Held, ...]
     rules: frozenset[str]
-    books: frozenset[str]
-    completes: bool
-    missing: frozenset[str]
+    site_books: frozenset[str]
+    known: frozenset[str]
+    whole: frozenset[str | None]
 
-    def answers_for(self, subject: Subject) -> bool:
-        """Whether this evening can say that the subject is no more."""
-        if subject.book is None:
-            return self.completes and not self.missing
-        return subject.book in self.books and subject.book not in self.missing
+    def ends(self, subject: Subject) -> bool:
+        """Whether a subject that no rule asks about tonight is no more, and not only out of sight.
+
+        A position that no file describes may belong to any group. A book that left the site ends when all others are
+        measured.
+        """
+        if subject.book is not None and subject.book not in self.site_books:
+            return None in self.whole
+        if subject.kind is SubjectKind.GROUP or subject.book is None:
+            return subject.book in self.whole
+        return subject.book in self.known
 
 
 def step(register: Iterable[Excess], evening: Evening, new_id: Iterable[str]) -> tuple[Excess, ...]:
@@ -97,18 +103,26 @@ def _gone_on(excess: Excess, held: Held | None, evening: Evening) -> Excess:
     if held is None:
         if excess.rule not in evening.rules:
             return _cured(excess, evening.day, CuredBy.END_OF_RULE, None)
-        if evening.answers_for(excess.subject):
+        if evening.ends(excess.subject):
             return _cured(excess, evening.day, CuredBy.END_OF_SUBJECT, None)
         return excess
     if held.standing is Standing.OVER:
-        value, distance, level = _figures(held)
-        still = replace(excess, last_on=evening.day, last_value=value, level=level)
-        if distance > excess.worst_distance:
-            still = replace(still, worst_on=evening.day, worst_value=value, worst_distance=distance)
-        return still
+        return _over_again(excess, held, evening.day)
     if held.doubtful:
         return excess
     return _cured(excess, evening.day, CuredBy.FIGURE, held.value)
+
+
+def _over_again(excess: Excess, held: Held, day: date) -> Excess:
+    """Another evening over. Figures in another unit cannot be compared, so that they start anew; the clock does not."""
+    value, distance, level = _figures(held)
+    still = replace(excess, side=held.side, owner=held.owner, last_on=day, last_value=value, level=level)
+    other_unit = (held.unit, held.currency) != (excess.unit, excess.currency)
+    if other_unit:
+        still = replace(still, unit=held.unit, currency=held.currency, opened_value=value)
+    if other_unit or distance > excess.worst_distance:
+        still = replace(still, worst_on=day, worst_value=value, worst_distance=distance)
+    return still
 
 
 def _cured(excess: Excess, day: date, by: CuredBy, value: float | None) -> Excess:
@@ -123,59 +137,67 @@ def _figures(held: Held) -> tuple[float, float, float]:
 
 @dataclass(frozen=True)
 class Differences:
-    """What must be recorded so that the recorded register becomes the expected one."""
+    """What must be recorded so that the recorded register becomes the expected one, with recorded ids where there are.
+
+    opened: with the ids of `expected`. changed: whose dates or figures differ, or that are alive again. cured: whose
+    cure must be recorded, after its change where there is one. voided: with the excess it is a part of, if any.
+    """
 
     opened: tuple[Excess, ...]
     changed: tuple[Excess, ...]
     cured: tuple[Excess, ...]
-    voided: tuple[Excess, ...]
+    voided: tuple[tuple[Excess, Excess | None], ...]
+    alive: tuple[Excess, ...]
 
 
 def compare(recorded: Collection[Excess], expected: Collection[Excess]) -> Differences:
     """Hold the register folded anew over corrected evenings against the one on record.
 
-    Runs of one rule and subject that share an evening are one excess and keep the recorded id. A recorded run that
-    meets no expected one should never have opened. Void excesses stay as they are.
+    Runs of one rule and subject that share an evening are one excess and keep the recorded id, the first of them when
+    there are several. A recorded run left over is void. Void excesses stay as they are.
     """
     standing = [excess for excess in recorded if excess.state is not ExcessState.VOID]
-    by_key: dict[tuple[str, str], list[Excess]] = {}
+    of_key: dict[tuple[str, str], list[Excess]] = {}
     for excess in standing:
-        by_key.setdefault((excess.rule, excess.subject.key), []).append(excess)
-    opened, changed, cured, met = [], [], [], set()
+        of_key.setdefault(_key(excess), []).append(excess)
+    opened, changed, cured, alive = [], [], [], []
+    met: set[str] = set()
+    named: dict[tuple[str, str], list[Excess]] = {}
     for wanted in expected:
-        own = next(
-            (
-                excess
-                for excess in by_key.get((wanted.rule, wanted.subject.key), [])
-                if excess.id not in met and _overlap(excess, wanted)
-            ),
-            None,
-        )
+        candidates = of_key.get(_key(wanted), [])
+        own = next((run for run in candidates if run.id not in met and _share_an_evening(run, wanted)), None)
+        after = wanted if own is None else replace(wanted, id=own.id)
+        named.setdefault(_key(wanted), []).append(after)
+        if after.alive:
+            alive.append(after)
         if own is None:
-            opened.append(wanted)
-            if not wanted.alive:
-                cured.append(wanted)
-            continue
-        met.add(own.id)
-        merged = replace(wanted, id=own.id, opened_value=wanted.opened_value)
-        moved = _dates_and_worst(own) != _dates_and_worst(merged) or (own.cured_on is not None and merged.alive)
-        if moved:
-            changed.append(merged)
-        if not merged.alive and (moved or (merged.cured_on, merged.cured_by) != (own.cured_on, own.cured_by)):
-            cured.append(merged)
-    voided = [excess for excess in standing if excess.id not in met]
-    return Differences(tuple(opened), tuple(changed), tuple(cured), tuple(voided))
+            opened.append(after)
+        else:
+            met.add(own.id)
+            if _run(after) != _run(own) or (after.alive and not own.alive):
+                changed.append(after)
+        if not after.alive and after != own:
+            cured.append(after)
+    voided = [
+        (run, next((other for other in named.get(_key(run), []) if _share_an_evening(run, other)), None))
+        for run in standing
+        if run.id not in met
+    ]
+    return Differences(tuple(opened), tuple(changed), tuple(cured), tuple(voided), tuple(alive))
 
 
-def _overlap(one: Excess, other: Excess) -> bool:
+def _key(excess: Excess) -> tuple[str, str]:
+    return excess.rule, excess.subject.key
+
+
+def _share_an_evening(one: Excess, other: Excess) -> bool:
+    """Whether some evening lies in both runs; the evening of the cure lies in none, unless it opened then too."""
     far = date.max
-    return one.opened_on <= (other.cured_on or far) and other.opened_on <= (one.cured_on or far)
+    if one.opened_on == other.opened_on:
+        return True
+    return one.opened_on < (other.cured_on or far) and other.opened_on < (one.cured_on or far)
 
 
-def _dates_and_worst(excess: Excess) -> tuple[object, ...]:
-    return excess.opened_on, excess.last_on, excess.last_value, excess.level, excess.worst_on, excess.worst_distance
-
-
-def by_rule_and_subject(register: Iterable[Excess]) -> Mapping[tuple[str, str], Excess]:
-    """The excesses that are alive, by what they are about."""
-    return {(excess.rule, excess.subject.key): excess for excess in register if excess.alive}
+def _run(excess: Excess) -> Excess:
+    """The excess without how it ended."""
+    return replace(excess, state=ExcessState.OPEN, cured_on=None, cured_by=None, cured_value=None)

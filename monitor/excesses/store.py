@@ -56,12 +56,17 @@ def record(index: sqlite3.Connection, entry: Entry) -> None:
             )
         case ExcessChanged() as fact:
             index.execute(
-                "UPDATE excess SET state = ?, opened_on = ?, last_on = ?, last_value = ?, level = ?, worst_on = ?,"
-                " worst_value = ?, worst_distance = ?, cured_on = NULL, cured_by = NULL, cured_value = NULL"
-                " WHERE id = ?",
+                "UPDATE excess SET state = ?, side = ?, unit = ?, currency = ?, owner = ?, opened_on = ?,"
+                " opened_value = ?, last_on = ?, last_value = ?, level = ?, worst_on = ?, worst_value = ?,"
+                " worst_distance = ?, cured_on = NULL, cured_by = NULL, cured_value = NULL WHERE id = ?",
                 (
                     fact.state,
+                    fact.side,
+                    fact.unit,
+                    fact.currency,
+                    fact.owner,
                     fact.opened_on.isoformat(),
+                    fact.opened_value,
                     fact.last_on.isoformat(),
                     fact.last_value,
                     fact.level,

@@ -50,10 +50,9 @@ class Figures:
 
 
 def screen(matrix: Floats, least: int) -> tuple[Floats, Codes]:
-    """The matrix fit to calculate with, and what each row lacks.
+    """The matrix in the layout that every method works on, and what each row lacks.
 
-    matrix: (subjects, scenarios). least: scenarios that the method needs. Rows with anything not finite come back as
-    zeros, so that they cannot disturb the arithmetic of the others; their lack says so.
+    matrix: (subjects, scenarios). least: scenarios that the method needs.
     Raises ValueError when the matrix does not have two axes.
     """
     # Row by row in memory: sums over a row then add in the same order whatever the company and the caller's layout.
@@ -64,6 +63,4 @@ def screen(matrix: Floats, least: int) -> tuple[Floats, Codes]:
     lack = np.where(finite, Lack.NONE, Lack.NOT_FINITE).astype(np.int8)
     if matrix.shape[1] < least:
         lack[:] = Lack.TOO_SHORT
-    if not finite.all():
-        matrix = np.where(finite[:, np.newaxis], matrix, 0.0)
     return matrix, lack

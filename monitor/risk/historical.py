@@ -23,15 +23,15 @@ def historical(pnl: Floats, confidence: Decimal, horizon_days: int = 1) -> Tail:
     """
     share = tail_share(confidence)
     root = root_of_time(horizon_days)
-    clean, lack = screen(pnl, least=1)
-    subjects, n = clean.shape
+    scenarios, lack = screen(pnl, least=1)
+    subjects, n = scenarios.shape
     within = share * n
     note = np.zeros(subjects, dtype=np.int8)
     if n < 1:
         nothing = Figures.of(np.zeros(subjects), lack)
         return Tail(nothing, nothing, exact_tail=False, note=note)
     rank = math.ceil(within)
-    worst = np.partition(clean, rank - 1, axis=1)[:, :rank]
+    worst = np.partition(scenarios, rank - 1, axis=1)[:, :rank]
     worst.sort(axis=1)
     counted = max(within, Fraction(1))
     weights = np.array([float(min(counted - place, 1)) for place in range(rank)])

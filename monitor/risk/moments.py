@@ -16,12 +16,11 @@ def mean_and_deviation(scenarios: Floats) -> tuple[Floats, Floats]:
     """The mean and the standard deviation with denominator n - 1, both (subjects,).
 
     scenarios: (subjects, n), finite, n >= 2. Two passes with the correction for the rounding of the mean (Chan, Golub
-    and LeVeque 1983, "Algorithms for computing the sample variance"). Exactly 0 for a row that is constant.
+    and LeVeque 1983, "Algorithms for computing the sample variance"). A constant row gives exactly 0: its deviations
+    are then all the same few units in the last place, whose sums and squares are exact.
     """
     n = scenarios.shape[1]
     mean = scenarios.mean(axis=1)
     deviations = scenarios - mean[:, np.newaxis]
     squares = np.square(deviations).sum(axis=1) - np.square(deviations.sum(axis=1)) / n
-    deviation = np.sqrt(np.maximum(squares, 0.0) / (n - 1))
-    same = constant(scenarios)
-    return np.where(same, scenarios[:, 0], mean), np.where(same, 0.0, deviation)
+    return mean, np.sqrt(np.maximum(squares, 0.0) / (n - 1))

@@ -29,14 +29,14 @@ def fit_normal(pnl: Floats, drift: Drift) -> NormalFit:
     pnl: (subjects, n), n >= 2. A row of zeros (a flat book) has sigma 0; a row of one other value lacks a spread.
     """
     check_drift(drift)
-    clean, lack = screen(pnl, least=2)
-    subjects, n = clean.shape
+    scenarios, lack = screen(pnl, least=2)
+    subjects, n = scenarios.shape
     if n < 2:
         return NormalFit(np.zeros(subjects), np.zeros(subjects), lack)
     with np.errstate(all="ignore"):
-        mean, sigma = mean_and_deviation(clean)
-    same = constant(clean)
-    lack[(lack == Lack.NONE) & same & (clean[:, 0] != 0)] = Lack.CONSTANT
+        mean, sigma = mean_and_deviation(scenarios)
+    same = constant(scenarios)
+    lack[(lack == Lack.NONE) & same & (scenarios[:, 0] != 0)] = Lack.CONSTANT
     # Squares that vanish would tell a book that moves that it cannot lose; squares that overflow say nothing either.
     lack[(lack == Lack.NONE) & ((~same & (sigma == 0)) | ~np.isfinite(sigma))] = Lack.OUT_OF_RANGE
     return NormalFit(mean if drift == "sample" else np.zeros(subjects), sigma, lack)

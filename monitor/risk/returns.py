@@ -14,6 +14,6 @@ def log_returns(prices: Floats) -> Floats:
     """
     prices = np.asarray(prices, dtype=np.float64)
     with np.errstate(all="ignore"):
-        usable = np.where(np.isfinite(prices) & (prices > 0), prices, np.nan)
+        usable = np.where(prices > 0, prices, np.nan)
         returns = np.log(usable[:, 1:] / usable[:, :-1])
         return np.where(np.isfinite(returns), returns, np.nan)

@@ -50,19 +50,19 @@ def fit_student(pnl: Floats, drift: Drift) -> StudentFit:
     ones, without a maximum at finite degrees of freedom, or whose fit does not settle.
     """
     stand_in = fit_normal(pnl, drift)
-    clean, _ = screen(pnl, least=2)
+    scenarios, _ = screen(pnl, least=2)
     location, scale = stand_in.location.copy(), stand_in.sigma.copy()
-    nu = np.full(len(clean), np.inf)
-    note = np.full(len(clean), FitNote.AS_ASKED, dtype=np.int8)
+    nu = np.full(len(scenarios), np.inf)
+    note = np.full(len(scenarios), FitNote.AS_ASKED, dtype=np.int8)
     moving = (stand_in.lack == Lack.NONE) & (stand_in.sigma > 0)
-    if clean.shape[1] < LEAST_SCENARIOS:
+    if scenarios.shape[1] < LEAST_SCENARIOS:
         note[moving] = FitNote.NORMAL_FOR_TOO_FEW
         return StudentFit(location, scale, nu, note, stand_in.lack)
     with np.errstate(all="ignore"):
         candidates = np.flatnonzero(moving)
         for start in range(0, len(candidates), _BLOCK):
             block = candidates[start : start + _BLOCK]
-            fitted = _fit_block(clean[block], free=drift == "sample")
+            fitted = _fit_block(scenarios[block], free=drift == "sample")
             note[block] = fitted.note
             took = np.isfinite(fitted.nu)
             location[block[took]] = fitted.location[took]

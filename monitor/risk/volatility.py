@@ -15,11 +15,11 @@ def sample(returns: Floats) -> Figures:
 
     returns: (subjects, sessions), at least 2 sessions. A row of one value has volatility 0.
     """
-    clean, lack = screen(returns, least=2)
-    if clean.shape[1] < 2:
-        return Figures.of(np.zeros(len(clean)), lack)
+    scenarios, lack = screen(returns, least=2)
+    if scenarios.shape[1] < 2:
+        return Figures.of(np.zeros(len(scenarios)), lack)
     with np.errstate(all="ignore"):
-        return Figures.of(mean_and_deviation(clean)[1], lack)
+        return Figures.of(mean_and_deviation(scenarios)[1], lack)
 
 
 def ewma(returns: Floats, decay: float) -> Figures:
@@ -29,11 +29,11 @@ def ewma(returns: Floats, decay: float) -> Figures:
     (J.P. Morgan/Reuters 1996, RiskMetrics Technical Document, 4th ed., ch. 5). returns: (subjects, sessions), at
     least 1. decay: L, above 0 and below 1; ValueError otherwise.
     """
-    clean, lack = screen(returns, least=1)
-    if clean.shape[1] < 1:
-        return Figures.of(np.zeros(len(clean)), lack)
+    scenarios, lack = screen(returns, least=1)
+    if scenarios.shape[1] < 1:
+        return Figures.of(np.zeros(len(scenarios)), lack)
     with np.errstate(all="ignore"):
-        return Figures.of(np.sqrt(ewma_variance(np.square(clean).mean(axis=1), clean, decay)), lack)
+        return Figures.of(np.sqrt(ewma_variance(np.square(scenarios).mean(axis=1), scenarios, decay)), lack)
 
 
 def ewma_variance(start: Floats, returns: Floats, decay: float) -> Floats:

@@ -450,12 +450,9 @@ def test_ewma_volatility_calms_by_itself() -> None:
 # The site and its rules
 
 
-def test_the_site_has_three_books_in_three_currencies_and_two_rounds() -> None:
+def test_the_site_has_three_books_in_three_currencies_and_one_round() -> None:
     assert {book.id: (book.currency, book.calendar) for book in site().books} == BOOKS
-    assert {each.id: each.books for each in site().rounds} == {
-        "asia": ("far-east",),
-        "europe-and-america": ("north-quay", "western"),
-    }
+    assert {each.id: each.books for each in site().rounds} == {"evening": ("north-quay", "far-east", "western")}
 
 
 def test_the_rules_use_every_kind_of_limit() -> None:

@@ -244,7 +244,7 @@ def test_equivalents_of_the_ucits_limit():
 
 
 def test_drift_sample_moves_the_normal_by_the_mean():
-    """VaR = -h mu + sqrt(h) sigma z, as design of the measure says; checked with mu 3, sigma 10, h 4 by hand."""
+    """VaR = -h mu + sqrt(h) sigma z (our convention), worked by hand for mu 3, sigma 10, h 4."""
     pnl = 3 + with_deviation(10.0)[np.newaxis]
     assert pnl.shape == (1, SESSIONS)
     found = one(normal(pnl, NINETY_NINE, 4, drift="sample").value_at_risk)

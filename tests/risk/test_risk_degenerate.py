@@ -113,7 +113,7 @@ def test_one_value_throughout_has_no_volatility_at_all(value):
 
 
 def test_rounding_never_shows_in_scenarios_that_are_all_equal():
-    for n in (7, 30, 250, 730):
+    for n in (7, 30, 250, 731):
         rows = np.repeat(np.random.default_rng(n).normal(size=(400, 1)), n, axis=1)
         tail = historical(rows, NINETY_NINE)
         assert (sample(rows).value == 0).all()

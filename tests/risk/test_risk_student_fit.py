@@ -10,7 +10,7 @@ from scipy import stats
 from monitor.risk.normal import fit_normal, normal
 from monitor.risk.probability import loss_probability
 from monitor.risk.student import student_t
-from monitor.risk.student_fit import NU_CEILING, NU_FLOOR, fit_student
+from monitor.risk.student_fit import NU_CEILING, NU_FLOOR, _derivatives, fit_student
 from monitor.risk.tail import FitNote
 
 NINETY_NINE = Decimal("0.99")
@@ -172,3 +172,33 @@ def test_nearly_normal_scenarios_settle(drift, n):
     fit = fit_student(rows, drift)
     assert set(fit.note.tolist()) <= {FitNote.AS_ASKED, FitNote.NORMAL_AS_LIMIT}
     assert (fit.nu[np.isfinite(fit.nu)] > 1000).any()
+    at_risk, scaled = (student_t(x, NINETY_NINE, 1, drift).value_at_risk.value for x in (rows, 3.7 * rows))
+    np.testing.assert_allclose(scaled, 3.7 * at_risk, rtol=1e-10)
+
+
+@pytest.mark.parametrize("free", [False, True])
+@pytest.mark.parametrize("nu", [2.5, 6.0, 60.0, 300.0])
+def test_gradient_and_hessian_are_those_of_the_likelihood(nu, free):
+    """By central differences of scipy's density, the location moving in units of the scale at the point."""
+    rows = np.random.default_rng(12).standard_t(4, size=(3, 80))
+    point = np.array([0.2, np.log(nu), 0.3 if free else 0.0])
+    parameters = 3 if free else 2
+    level, gradient, hessian = _derivatives(rows, np.tile(point, (3, 1)), free)
+
+    def likelihood(*moves):
+        at = point.copy()
+        for axis, by in moves:
+            at[axis] += by * (np.exp(point[0]) if axis == 2 else 1.0)
+        return stats.t.logpdf(rows, np.exp(at[1]), at[2], np.exp(at[0])).sum(axis=1)
+
+    assert level == pytest.approx(likelihood(), rel=1e-11)
+    h = 1e-3
+    for i in range(parameters):
+        slope = (likelihood((i, h)) - likelihood((i, -h))) / (2 * h)
+        assert gradient[:, i] == pytest.approx(slope, rel=1e-4, abs=1e-4)
+        for j in range(parameters):
+            bend = (
+                likelihood((i, h), (j, h)) - likelihood((i, h), (j, -h))
+                - likelihood((i, -h), (j, h)) + likelihood((i, -h), (j, -h))
+            ) / (4 * h * h)  # fmt: skip
+            assert hessian[:, i, j] == pytest.approx(bend, rel=1e-3, abs=1e-4)

@@ -1,0 +1,61 @@
+"""What several folders of tests share."""
+
+from __future__ import annotations
+
+import os
+import shutil
+import subprocess
+import sys
+import zipfile
+from dataclasses import dataclass
+from pathlib import Path
+
+import pytest
+
+PROJECT = Path(__file__).parents[1]
+
+
+def run_duskcheck(*arguments: str | Path, **more: str) -> subprocess.CompletedProcess[str]:
+    """The command in a process of its own."""
+    command = [sys.executable, "-c", "from monitor.cli import main; main()", *map(str, arguments)]
+    environment = os.environ | {"NO_COLOR": "1", "COLUMNS": "200"} | more
+    return subprocess.run(command, capture_output=True, text=True, env=environment, check=False, timeout=200)
+
+
+@dataclass(frozen=True)
+class Demo:
+    """The demo firm after its year. said: what the command printed."""
+
+    folder: Path
+    site: Path
+    said: str
+
+
+@pytest.fixture(scope="session")
+def demo(tmp_path_factory: pytest.TempPathFactory) -> Demo:
+    """The demo run once for all tests, from a wheel built of this checkout and unpacked elsewhere."""
+    place = tmp_path_factory.mktemp("wheel")
+    for part in ("monitor", "demo_feed"):  # built from a copy, for building leaves folders behind
+        shutil.copytree(PROJECT / part, place / "source" / part, ignore=shutil.ignore_patterns("__pycache__"))
+    for part in ("pyproject.toml", "README.md"):
+        shutil.copy(PROJECT / part, place / "source" / part)
+    source = str(place / "source")
+    build = [sys.executable, "-m", "pip", "wheel", "--quiet", "--no-deps", "--wheel-dir", str(place), source]
+    subprocess.run(build, check=True, capture_output=True, text=True)
+    [wheel] = place.glob("*.whl")
+    installed = place / "installed"
+    with zipfile.ZipFile(wheel) as packed:
+        packed.extractall(installed)
+    folder = place / "saltmere"
+    # An isolated interpreter would not see the libraries; the checkout itself is kept out by the working directory.
+    code = f"import sys; sys.path.insert(0, {str(installed)!r}); from monitor.cli import main; main()"
+    ended = subprocess.run(
+        [sys.executable, "-c", code, "demo", str(folder)],
+        capture_output=True,
+        text=True,
+        cwd=place,
+        env=os.environ | {"NO_COLOR": "1", "COLUMNS": "120"},
+        check=False,
+    )
+    assert ended.returncode == 0, ended.stderr
+    return Demo(folder, folder / "site.yaml", ended.stdout)
