@@ -108,7 +108,7 @@ def _record(
         results=state.archive.put(results.encode(standings)),
         told=tell,
     )
-    tonight = as_evening(recipe, standings, world.terms, world.scope.completes)
+    tonight = as_evening(recipe, standings, world.terms)
     with state.ledger.transaction(now) as transaction:
         entry = transaction.append(fact)
         settled = _settle(state, index, tonight, recipe)

@@ -99,6 +99,11 @@ def latest_of_all(index: sqlite3.Connection, since: date | None = None) -> list[
     )
 
 
+def newest_at(index: sqlite3.Connection, seq: int) -> CheckedEvening:
+    """The evening whose transaction recorded the entry of a number."""
+    return _rows(index, "WHERE seq <= ? ORDER BY seq DESC LIMIT 1", (seq,))[0]
+
+
 def before(index: sqlite3.Connection, day: date, round_id: str) -> CheckedEvening | None:
     """The newest edition of the evening before a date, of the same round."""
     found = _rows(
@@ -116,6 +121,14 @@ def after(index: sqlite3.Connection, day: date, round_id: str) -> CheckedEvening
 def any_after(index: sqlite3.Connection, day: date) -> bool:
     """Whether an evening of a later date is on record."""
     return index.execute("SELECT 1 FROM evening WHERE day > ? LIMIT 1", (day.isoformat(),)).fetchone() is not None
+
+
+def newest_day(index: sqlite3.Connection) -> date | None:
+    """The newest business date that was checked or given up, of any round: the day to which excesses have aged."""
+    (found,) = index.execute(
+        "SELECT MAX(day) FROM (SELECT day FROM evening UNION ALL SELECT day FROM missed)"
+    ).fetchone()
+    return date.fromisoformat(found) if found else None
 
 
 def book_lines(

@@ -8,13 +8,14 @@ from datetime import date
 from monitor import evenings, results
 from monitor.excesses import store
 from monitor.excesses.register import Excess
-from monitor.facts import FileRefused
+from monitor.facts import EveningChecked, ExcessCured, ExcessOpened, ExcessVoided, FileRefused
 from monitor.feed.calendars import Sessions
 from monitor.notices.news import EveningNews, PastEvening, SummaryNews
 from monitor.report.pages import page_name
-from monitor.settle import Settled
+from monitor.settle import ExcessFact, Settled
 from monitor.state import State
-from monitor.world import Standings, Terms, World
+from monitor.words import ExcessState
+from monitor.world import Answer, Standings, Terms, World
 
 
 def evening_news(
@@ -24,6 +25,13 @@ def evening_news(
     recipe = world.recipe
     answers = {(answer.rule, answer.subject.key): answer for answer in standings.answers}
     before = evenings.before(state.index(), recipe.date, recipe.round)
+    aged_on = evenings.newest_day(state.index()) or recipe.date
+    new = {excess.id for excess in settled.opened}
+    alive_again = [excess for excess in (*settled.opened, *settled.reopened) if excess.alive]
+
+    def tonight(excess: Excess, decided_on: date | None) -> Answer | None:
+        return answers.get((excess.rule, excess.subject.key)) if decided_on == recipe.date else None
+
     return EveningNews(
         site=world.terms.firm.site,
         recipe=recipe,
@@ -32,10 +40,13 @@ def evening_news(
         hash=entry_hash,
         standings=standings,
         rules={rule.id: rule for rule in world.terms.rules},
-        opened=tuple((excess, answers[excess.rule, excess.subject.key]) for excess in settled.opened if excess.alive),
-        cured=tuple((excess, answers.get((excess.rule, excess.subject.key))) for excess in settled.cured),
+        opened=tuple((excess, tonight(excess, excess.last_on)) for excess in alive_again),
+        cured=tuple((excess, tonight(excess, excess.cured_on)) for excess in settled.cured),
+        on_record=frozenset(excess.id for excess in (*settled.reopened, *settled.cured)) - new,
         voided=settled.voided,
-        alive=days_of(state, settled.alive, world.terms, recipe.date),
+        told=_told_then(state, settled.voided),
+        alive=days_of(state, settled.alive, world.terms, aged_on),
+        aged_on=aged_on,
         refused=_refused_since(state, before.seq if before else 0, recipe.known),
         before=before.counts if before else None,
         nightly=state.site.settings.notices.nightly_note,
@@ -46,20 +57,52 @@ def evening_news(
 def summary_news(state: State, untold: list[evenings.CheckedEvening], terms: Terms) -> SummaryNews:
     """Evenings that were checked days after their date, for one summary."""
     last = untold[-1]
+    aged_on = evenings.newest_day(state.index()) or last.recipe.date
     register = store.load(state.index())
-    days = {own.recipe.date for own in untold}
+    facts = _changes_of(state, untold)
+    opened, cured, void = (
+        {fact.excess for fact in facts if isinstance(fact, kind)} for kind in (ExcessOpened, ExcessCured, ExcessVoided)
+    )
+    voided = tuple(excess for excess in register if excess.id in void - opened)
     return SummaryNews(
         site=terms.firm.site,
         evenings=tuple(_past(state, own) for own in untold),
         seq=last.seq,
         hash=last.hash,
         rules={rule.id: rule for rule in terms.rules},
-        opened=tuple(excess for excess in register if excess.opened_on in days),
-        cured=tuple(excess for excess in register if excess.cured_on in days),
-        alive=days_of(state, [excess for excess in register if excess.alive], terms, last.recipe.date),
+        opened=tuple(excess for excess in register if excess.id in opened and excess.state is not ExcessState.VOID),
+        cured=tuple(excess for excess in register if excess.id in cured and excess.state is ExcessState.CURED),
+        voided=voided,
+        told=_told_then(state, voided),
+        alive=days_of(state, [excess for excess in register if excess.alive], terms, aged_on),
+        aged_on=aged_on,
         nightly=state.site.settings.notices.nightly_note,
         page=page_name(last.recipe.date, last.recipe.round, last.edition),
     )
+
+
+def _changes_of(state: State, untold: list[evenings.CheckedEvening]) -> list[ExcessFact]:
+    """What these evenings changed in the register: the entries that follow theirs in the same transactions."""
+    seqs = {own.seq for own in untold}
+    found: list[ExcessFact] = []
+    ours = False
+    for entry in state.ledger.entries(min(seqs) - 1):
+        if isinstance(entry.fact, EveningChecked):
+            ours = entry.seq in seqs
+        elif ours and isinstance(entry.fact, ExcessFact):
+            found.append(entry.fact)
+    return found
+
+
+def _told_then(state: State, voided: Iterable[Excess]) -> dict[str, tuple[str, ...]]:
+    """By excess the groups that its rule named when its opening was recorded."""
+    index = state.index()
+    found = {}
+    for excess in voided:
+        opened_by = evenings.newest_at(index, store.recorded_at(index, excess.id))
+        rules = state.terms(opened_by.recipe.rules).rules
+        found[excess.id] = next((rule.tell for rule in rules if rule.id == excess.rule), ())
+    return found
 
 
 def days_of(state: State, alive: Iterable[Excess], terms: Terms, day: date) -> dict[Excess, int]:

@@ -13,7 +13,8 @@ from zoneinfo import ZoneInfo
 
 from monitor import evenings
 from monitor.adoption import adopt
-from monitor.evening import Checked, check_evening, take_in
+from monitor.evening import Checked, check_evening, recall, take_in
+from monitor.evenings import CheckedEvening
 from monitor.facts import Hand
 from monitor.feed.build import calendars_of, rounds_due
 from monitor.feed.calendars import Sessions
@@ -98,18 +99,19 @@ def is_recent(state: State, terms: str, due: Due, now: datetime) -> bool:
     return due.day > today or sessions.count(due.day, today) <= OLD_AFTER
 
 
-def tell_summary(state: State, terms: str, now: datetime) -> None:
-    """One notice for all evenings that were checked too late for notices of their own, if there are any."""
+def tell_summary(state: State, terms: str, now: datetime) -> CheckedEvening | None:
+    """One notice for all evenings that were checked too late for notices of their own; returns the last of them."""
     index = state.index()
     (told,) = index.execute("SELECT COALESCE(MAX(after_seq), 0) FROM outbox WHERE topic = 'summary'").fetchone()
     untold = evenings.untold(index, told)
     if not untold:
-        return
+        return None
     news = summary_news(state, untold, state.terms(terms))
     settings = state.site.settings.notices
     with state.ledger.transaction(now) as transaction:
         for queued in outbox.queue(compose_summary(news), settings, state.archive, (news.seq, news.hash)):
             transaction.append(queued)
+    return untold[-1]
 
 
 def send(state: State, now: datetime) -> list[outbox.Result]:
@@ -119,8 +121,10 @@ def send(state: State, now: datetime) -> list[outbox.Result]:
 
 
 def finish(state: State, terms: str, last: Checked | None, now: datetime) -> None:
-    """After the last evening of a run: the summary of old ones, its page, and the notices."""
-    tell_summary(state, terms, now)
+    """After the last evening of a run: the summary of old ones, the pages of both, and the notices."""
+    summed_up = tell_summary(state, terms, now)
+    if summed_up is not None and (last is None or last.evening != summed_up):
+        draw_evening(state, summed_up, recall(state, summed_up).standings)
     if last is not None:
         draw_evening(state, last.evening, last.standings)
     send(state, now)

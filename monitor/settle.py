@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 from datetime import date
 
 from monitor.excesses.register import Excess
-from monitor.excesses.step import Evening, Held, compare, step
+from monitor.excesses.step import Evening, Held, compare, step, without_end
 from monitor.facts import ExcessChanged, ExcessCured, ExcessOpened, ExcessVoided
 from monitor.words import CuredBy, ExcessState, Recipe, Side, SubjectKind
 from monitor.world import Answer, Rule, Standings, Terms
@@ -93,11 +93,11 @@ def settle_again(register: Sequence[Excess], evenings: Iterable[Evening], day: d
         *(ExcessVoided(excess.id, day, excess.void_reason or "") for excess in voided),
         *(_opened(excess) for excess in first),
         *(
-            _changed(excess, day, "over again up to this day")
+            _changed(excess, day, "over on later evenings too")
             for excess, opening in zip(opened, first, strict=True)
-            if excess.last_on != opening.last_on
+            if without_end(excess) != opening
         ),
-        *(_changed(excess, day, f"corrected by the check of {day}") for excess in found.changed),
+        *(_changed(excess, day, "corrected") for excess in found.changed),
         *(_cured(excess) for excess in cured),
     ]
     return Settled(

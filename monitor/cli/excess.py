@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from datetime import UTC, datetime
+from collections.abc import Mapping
+from datetime import date
 from pathlib import Path
 from typing import Any
 
@@ -10,6 +11,7 @@ import click
 from rich.console import Console
 from rich.table import Table
 
+from monitor import evenings
 from monitor.cli.documents import excess_document
 from monitor.cli.options import json_option, print_json, site_option
 from monitor.excesses import store
@@ -17,9 +19,18 @@ from monitor.excesses.register import Excess
 from monitor.facts import ExcessChanged, ExcessCured, ExcessOpened, ExcessVoided
 from monitor.news import days_of
 from monitor.notices import figures
+from monitor.notices.excess_words import last_over, worst_of
+from monitor.settle import ExcessFact
 from monitor.site import open_site
 from monitor.state import State, open_state
-from monitor.words import ExcessState, WrongUse
+from monitor.words import CuredBy, ExcessState, Unit, WrongUse
+from monitor.world import Rule
+
+CURED_BY = {
+    CuredBy.FIGURE: "cured: within its limit",
+    CuredBy.END_OF_RULE: "cured: its rule is no longer in force",
+    CuredBy.END_OF_SUBJECT: "cured: its subject is no longer held, or its rule no longer asks about it",
+}
 
 
 @click.group()
@@ -44,30 +55,32 @@ def list_excesses(site_file: Path, as_json: bool, wanted: str | None, book: str 
             and owner in (None, own.owner)
         ]
         found.sort(key=lambda own: (own.opened_on, store.number_of(own.id)))
-        days = _days(state, found)
+        days, aged_on = _days(state, found)
+        rules = _rules(state)
     if as_json:
         print_json([excess_document(own, days.get(own)) for own in found])
         return
     if not found:
         click.echo("no excess" if wanted == "all" else f"no excess is {wanted or 'open or waived'}")
         return
-    table = Table(box=None, pad_edge=False)
-    for heading in ("excess", "state", "day", "opened", "rule", "subject", "last over", "limit", "worst", "owner"):
-        table.add_column(heading, justify="right" if heading in ("day", "last over", "limit", "worst") else "left")
+    table = Table(box=None, pad_edge=False, padding=(0, 1, 0, 0))
+    for heading in ("excess", "opened on"):
+        table.add_column(heading, no_wrap=True)
+    for heading in ("state", "rule and subject", "last over at", "limit", "worst", "owner"):
+        table.add_column(heading, overflow="fold")
     for own in found:
         table.add_row(
             own.id,
-            own.state.value,
-            str(days.get(own, "")),
             str(own.opened_on),
-            own.rule,
-            own.subject.name,
-            figures.figure(own.last_value, own.unit, own.currency),
-            figures.level(own.level, own.unit, own.currency),
-            figures.figure(own.worst_value, own.unit, own.currency),
+            _state(own, days.get(own)),
+            f"{own.rule} of {own.subject.name}",
+            *last_over(own, None, rules),
+            worst_of(own, rules),
             own.owner or "",
         )
     Console(highlight=False).print(table)
+    if days:
+        click.echo(f"Days are business days of the subject's calendar, counted to {aged_on}, the newest on record.")
 
 
 @excess.command("show")
@@ -82,44 +95,64 @@ def show_excess(site_file: Path, as_json: bool, excess_id: str) -> None:
             newest = f"one of e1 to e{len(register)}" if register else "nothing yet: no excess was ever opened"
             raise WrongUse(f"found the excess {excess_id!r}; expected {newest}. `duskcheck excess list --state all`")
         own = register[excess_id]
-        day = _days(state, [own]).get(own)
+        rules = _rules(state)
+        days, aged_on = _days(state, [own])
         story = [
-            (entry.seq, entry.at, _told(entry.fact, own))
+            (entry.seq, entry.at, _told(entry.fact, own, rules))
             for entry in state.ledger.entries()
-            if isinstance(entry.fact, ExcessOpened | ExcessChanged | ExcessCured | ExcessVoided)
-            and entry.fact.excess == excess_id
+            if isinstance(entry.fact, ExcessFact) and entry.fact.excess == excess_id
         ]
+    day = days.get(own)
     if as_json:
         told: dict[str, Any] = {"story": [{"seq": seq, "at": at, "what": what} for seq, at, what in story]}
         print_json(excess_document(own, day) | told)
         return
-    state_now = f"{own.state.value}, day {day}" if day else own.state.value
-    click.echo(f"{own.id}: rule {own.rule}, {own.subject.name}: {state_now}")
+    counted = f" (business days up to {aged_on})" if day else ""
+    title = f" ({rules[own.rule].title})" if own.rule in rules else ""
+    click.echo(f"{own.id}: {own.rule}{title} of {own.subject.name}: {_state(own, day)}{counted}")
+    click.echo(f"  owner {own.owner or 'none'}, worst {worst_of(own, rules)}")
     for seq, _, what in story:
         click.echo(f"  {what}  (entry {seq})")
 
 
-def _days(state: State, found: list[Excess]) -> dict[Excess, int]:
+def _state(own: Excess, day: int | None) -> str:
+    if day is not None:
+        return f"{own.state.value}, day {day}"
+    return f"cured on {own.cured_on}" if own.state is ExcessState.CURED else own.state.value
+
+
+def _days(state: State, found: list[Excess]) -> tuple[dict[Excess, int], date | None]:
+    """The day of each that is alive, and the date up to which days are counted."""
+    adopted, newest = state.last_adopted(), evenings.newest_day(state.index())
+    if adopted is None or newest is None:
+        return {}, None
+    return days_of(state, [own for own in found if own.alive], state.terms(adopted[0]), newest), newest
+
+
+def _rules(state: State) -> Mapping[str, Rule]:
     adopted = state.last_adopted()
-    if adopted is None:
-        return {}
-    today = datetime.now(UTC).date()
-    (last,) = state.index().execute("SELECT MAX(day) FROM evening").fetchone()
-    newest = datetime.fromisoformat(last).date() if last else today
-    return days_of(state, [own for own in found if own.alive], state.terms(adopted[0]), newest)
+    return {rule.id: rule for rule in state.terms(adopted[0]).rules} if adopted else {}
 
 
-def _told(fact: ExcessOpened | ExcessChanged | ExcessCured | ExcessVoided, own: Excess) -> str:
-    def worded(value: float | None) -> str:
-        return "" if value is None else figures.figure(value, own.unit, own.currency)
+def _told(fact: ExcessFact, own: Excess, rules: Mapping[str, Rule]) -> str:
+    measure = rules[own.rule].measure.name if own.rule in rules else ""
+
+    def against(value: float, level: float, unit: Unit, currency: str | None) -> str:
+        worded, limit = figures.against(value, level, unit, currency, measure)
+        return f"{worded}, limit {limit}"
 
     match fact:
         case ExcessOpened():
-            return f"{fact.day}  opened at {worded(fact.value)}, limit {worded(fact.level)}"
+            return f"{fact.day}  opened at {against(fact.value, fact.level, fact.unit, fact.currency)}"
         case ExcessChanged():
-            return f"{fact.day}  {fact.reason}: {worded(fact.last_value)}, limit {worded(fact.level)}"
+            last = against(fact.last_value, fact.level, fact.unit, fact.currency)
+            if fact.last_on == fact.day:
+                return f"{fact.day}  {fact.reason}: {last}"
+            return f"{fact.day}  {fact.reason}: opened on {fact.opened_on}, last over on {fact.last_on} at {last}"
         case ExcessCured():
-            value = f" at {worded(fact.value)}" if fact.value is not None else ""
-            return f"{fact.day}  cured by {fact.by.replace('_', ' ')}{value}"
+            value = (
+                f", at {figures.figure(fact.value, own.unit, own.currency, measure)}" if fact.value is not None else ""
+            )
+            return f"{fact.day}  {CURED_BY[fact.by]}{value}"
         case ExcessVoided():
             return f"{fact.day}  void: {fact.reason}"

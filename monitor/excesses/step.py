@@ -174,7 +174,7 @@ def compare(recorded: Collection[Excess], expected: Collection[Excess]) -> Diffe
             opened.append(after)
         else:
             met.add(own.id)
-            if _run(after) != _run(own) or (after.alive and not own.alive):
+            if without_end(after) != without_end(own) or (after.alive and not own.alive):
                 changed.append(after)
         if not after.alive and after != own:
             cured.append(after)
@@ -198,6 +198,6 @@ def _share_an_evening(one: Excess, other: Excess) -> bool:
     return one.opened_on < (other.cured_on or far) and other.opened_on < (one.cured_on or far)
 
 
-def _run(excess: Excess) -> Excess:
+def without_end(excess: Excess) -> Excess:
     """The excess without how it ended."""
     return replace(excess, state=ExcessState.OPEN, cured_on=None, cured_by=None, cured_value=None)

@@ -99,6 +99,12 @@ def new_ids(index: sqlite3.Connection) -> Iterator[str]:
         yield f"e{last}"
 
 
+def recorded_at(index: sqlite3.Connection, excess: str) -> int:
+    """The number of the entry that opened an excess."""
+    (seq,) = index.execute("SELECT seq FROM excess WHERE id = ?", (excess,)).fetchone()
+    return int(seq)
+
+
 def number_of(excess: str) -> int:
     return int(excess.removeprefix("e"))
 

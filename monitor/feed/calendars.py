@@ -76,6 +76,13 @@ def library_version() -> str:
     return importlib.metadata.version("exchange_calendars")
 
 
+def in_library(calendar: str) -> bool:
+    """Whether exchange_calendars knows a code, without the cost of its sessions."""
+    import exchange_calendars
+
+    return calendar in exchange_calendars.get_calendar_names(include_aliases=True)
+
+
 def from_library(calendar: str) -> Sessions:
     """All sessions that exchange_calendars knows. Raises WrongUse for a code it does not know."""
     import exchange_calendars

@@ -26,8 +26,10 @@ class Grid:
 
     Days are ordinals, ascending; a source day of 0 means that nothing is known yet. The first row of each lies before
     everything known, so that any date finds a row. given: (days, instruments) a file gave a close for that very day.
+    cash: (instruments,) whose close is always 1, and which no file of prices names.
     """
 
+    cash: Booleans
     days: Integers
     given: Booleans
     close: Floats
@@ -49,13 +51,15 @@ def make_grid(
 ) -> Grid:
     """Everything known from LOOK_BACK before `first` up to `last`. currencies: sorted."""
     since = first - LOOK_BACK
+    cash = _of_kind(instruments, InstrumentKind.CASH)
     days, names, values = history.matrix(_files(known, FileKind.HISTORY, FileKind.PRICES, since), since, last)
     days, closes = _after_nothing(days, _closes_of(instruments, names, values))
     close, close_day = _carry(days, closes)
+    close[:, cash] = 1.0
     rate_days, pairs, rates = history.matrix(_files(known, FileKind.HISTORY_FX, FileKind.FX, since), since, last)
     rate_days, rates = _after_nothing(rate_days, rates)
     rate, rate_day = worth(*_carry(rate_days, rates), pairs, currencies, base)
-    return Grid(days, ~np.isnan(closes), close, close_day, rate_days, tuple(currencies), rate.T, rate_day.T)
+    return Grid(cash, days, ~np.isnan(closes), close, close_day, rate_days, tuple(currencies), rate.T, rate_day.T)
 
 
 def cut_window(
@@ -67,7 +71,8 @@ def cut_window(
     own_open = {name: own[name].open_on_each(sessions) for name in set(calendars)}
     opened = np.array([own_open[name] for name in calendars], dtype=np.bool_).reshape(len(calendars), len(sessions))
     given_today = grid.given[rows] & (grid.days[rows] == ordinals)[:, None]
-    return Window(calendar, sessions, grid.close[rows].T.copy(), grid.rate[rate_rows].T.copy(), opened & ~given_today.T)
+    gap = opened & ~given_today.T & ~grid.cash[:, None]
+    return Window(calendar, sessions, grid.close[rows].T.copy(), grid.rate[rate_rows].T.copy(), gap)
 
 
 def cut_market(
@@ -84,13 +89,12 @@ def cut_market(
     row, rate_row = _row_of(grid.days, ordinal)[0], _row_of(grid.rate_days, ordinal)[0]
     last_session = {name: own[name].last(on).toordinal() for name in {*calendars, firm_calendar}}
     expected = np.array([last_session[name] for name in calendars], dtype=np.int64)
-    cash = np.array([item.kind is InstrumentKind.CASH for item in instruments], dtype=np.bool_)
     return Market(
         on=on,
         instruments=instruments,
-        close=np.where(cash, 1.0, grid.close[row]),
-        closed_on=_days(np.where(cash, on.toordinal(), grid.close_day[row])),
-        carried=(grid.close_day[row] < expected) & ~cash,
+        close=grid.close[row],
+        closed_on=_days(np.where(grid.cash, on.toordinal(), grid.close_day[row])),
+        carried=(grid.close_day[row] < expected) & ~grid.cash,
         unknown=unknown,
         currencies=grid.currencies,
         rate=grid.rate[rate_row],
@@ -106,14 +110,14 @@ def _files(known: Known, start: FileKind, daily: FileKind, since: date) -> list[
 def _closes_of(instruments: Sequence[Instrument], names: Sequence[str], values: Floats) -> Floats:
     """The closes of these instruments; a close that is not positive counts only for a future."""
     place = {name: at for at, name in enumerate(names)}
-    closes = np.full((len(values), len(instruments)), np.nan)
-    for column, instrument in enumerate(instruments):
-        if instrument.kind is InstrumentKind.CASH:
-            closes[:, column] = 1.0
-        elif instrument.id in place:
-            own = values[:, place[instrument.id]]
-            closes[:, column] = own if instrument.kind is InstrumentKind.FUTURE else np.where(own > 0, own, np.nan)
+    columns = np.array([place.get(instrument.id, len(names)) for instrument in instruments], dtype=np.int64)
+    closes = np.column_stack([values, np.full(len(values), np.nan)])[:, columns]
+    closes[(closes <= 0) & ~_of_kind(instruments, InstrumentKind.FUTURE)] = np.nan
     return closes
+
+
+def _of_kind(instruments: Sequence[Instrument], kind: InstrumentKind) -> Booleans:
+    return np.array([item.kind is kind for item in instruments], dtype=np.bool_)
 
 
 def _after_nothing(days: Integers, values: Floats) -> tuple[Integers, Floats]:

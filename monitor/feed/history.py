@@ -1,6 +1,7 @@
 """The cache of prices, rates and sessions: history.sqlite. Deletable at any time; rebuilt from the archive.
 
-One checked float64 blob a file and day, so that a day is appended in one write and a window read without parsing.
+One checked float64 blob a file, so that a file is kept in one write and a window read without parsing. Lists of names
+are kept once, for those of one day and the next are mostly the same.
 """
 
 from __future__ import annotations
@@ -10,6 +11,7 @@ import zlib
 from collections.abc import Callable, Sequence
 from datetime import date
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -17,33 +19,38 @@ from monitor.facts import UsedFile
 from monitor.feed import calendars
 from monitor.feed.calendars import Sessions
 from monitor.feed.kinds import Panel, Parsed, Vocabulary, parse
+from monitor.words import DuskcheckError
 from monitor.world import Floats, Integers
 
-FORMAT = 1
+FORMAT = 2
 TABLES = """
 CREATE TABLE names (id INTEGER PRIMARY KEY, joined TEXT UNIQUE NOT NULL) STRICT;
-CREATE TABLE stored (sha256 TEXT PRIMARY KEY) STRICT, WITHOUT ROWID;
-CREATE TABLE day (
-    sha256 TEXT, ordinal INTEGER, names INTEGER, closes BLOB, sum INTEGER,
-    PRIMARY KEY (sha256, ordinal)) STRICT, WITHOUT ROWID;
-CREATE TABLE sessions (calendar TEXT, version TEXT, ends TEXT, days BLOB, PRIMARY KEY (calendar, version)) STRICT;
+CREATE TABLE panel (sha256 TEXT PRIMARY KEY, names INTEGER, days BLOB, closes BLOB, sum INTEGER) STRICT;
+CREATE TABLE sessions (
+    calendar TEXT, version TEXT, ends TEXT, days BLOB, sum INTEGER, PRIMARY KEY (calendar, version)) STRICT;
 CREATE TABLE seen (name TEXT PRIMARY KEY, size INTEGER, changed INTEGER, sha256 TEXT) STRICT, WITHOUT ROWID;
 """
+# What SQLite says of a file that is broken or not ours; other errors are of the disk or of another process.
+BROKEN = (sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB, sqlite3.SQLITE_ERROR)
 
 
 class History:
-    """Reads blobs by hash through `read` when the cache does not hold them."""
+    """Reads blobs by hash through `read` when the cache does not hold them. A broken cache is begun anew."""
 
     def __init__(self, path: Path, read: Callable[[str], bytes]) -> None:
+        self._path = path
         self._read = read
-        self._db = _open(path)
+        self._db: sqlite3.Connection | None = None
         self._panels: dict[str, Panel] = {}
+        self._lists: dict[str, tuple[str, ...]] = {}
         self._parsed: dict[str, Parsed] = {}
         self._sessions: dict[str, Sessions] = {}
         self._fetched: set[str] = set()
 
     def close(self) -> None:
-        self._db.close()
+        if self._db is not None:
+            self._db.close()
+            self._db = None
 
     def sessions(self, calendar: str, until: date) -> Sessions:
         """The sessions of a calendar as exchange_calendars has them. Raises WrongUse for unknown codes.
@@ -56,31 +63,36 @@ class History:
             self._sessions[calendar] = self._fetch_sessions(calendar)
         return self._sessions[calendar]
 
+    def knows_calendar(self, calendar: str) -> bool:
+        """Whether there are sessions of a calendar. Does not raise for unknown codes."""
+        return calendar in self._sessions or self._kept_sessions(calendar) is not None or calendars.in_library(calendar)
+
     def _kept_sessions(self, calendar: str) -> Sessions | None:
-        row = self._db.execute(
-            "SELECT ends, days FROM sessions WHERE calendar = ? AND version = ?",
+        for ends, days, total in self._rows(
+            "SELECT ends, days, sum FROM sessions WHERE calendar = ? AND version = ?",
             (calendar, calendars.library_version()),
-        ).fetchone()
-        if row is None:
-            return None
-        return Sessions(calendar, np.frombuffer(row[1], dtype="<M8[D]"), date.fromisoformat(row[0]))
+        ):
+            if _sum(calendar, ends, days) == total:
+                return Sessions(calendar, np.frombuffer(days, dtype="<M8[D]"), date.fromisoformat(ends))
+        return None
 
     def _fetch_sessions(self, calendar: str) -> Sessions:
         found = calendars.from_library(calendar)
         self._fetched.add(calendar)
-        self._db.execute(
-            "INSERT OR REPLACE INTO sessions VALUES (?, ?, ?, ?)",
-            (calendar, calendars.library_version(), found.end.isoformat(), found.days.astype("<M8[D]").tobytes()),
+        ends, days = found.end.isoformat(), found.days.astype("<M8[D]").tobytes()
+        self._rows(
+            "INSERT OR REPLACE INTO sessions VALUES (?, ?, ?, ?, ?)",
+            (calendar, calendars.library_version(), ends, days, _sum(calendar, ends, days)),
         )
         return found
 
     def seen(self) -> dict[tuple[str, int, int], str]:
         """The hashes of the files in the drop that were hashed before, by name, size and time of change."""
-        rows = self._db.execute("SELECT name, size, changed, sha256 FROM seen")
+        rows = self._rows("SELECT name, size, changed, sha256 FROM seen")
         return {(name, size, changed): sha256 for name, size, changed, sha256 in rows}
 
     def remember_seen(self, name: str, size: int, changed: int, sha256: str) -> None:
-        self._db.execute("INSERT OR REPLACE INTO seen VALUES (?, ?, ?, ?)", (name, size, changed, sha256))
+        self._rows("INSERT OR REPLACE INTO seen VALUES (?, ?, ?, ?)", (name, size, changed, sha256))
 
     def parsed(self, file: UsedFile) -> Parsed:
         """An accepted file that is not a panel, parsed."""
@@ -91,20 +103,14 @@ class History:
 
     def keep(self, sha256: str, panel: Panel) -> None:
         """Store the panel of a file just accepted."""
-        if self._db.execute("SELECT 1 FROM stored WHERE sha256 = ?", (sha256,)).fetchone():
-            return
         joined = "\n".join(panel.names)
-        self._db.execute("BEGIN")
-        self._db.execute("INSERT OR IGNORE INTO names (joined) VALUES (?)", (joined,))
-        (names,) = self._db.execute("SELECT id FROM names WHERE joined = ?", (joined,)).fetchone()
-        blobs = (row.astype("<f8").tobytes() for row in panel.values)
-        self._db.executemany(
-            "INSERT OR REPLACE INTO day VALUES (?, ?, ?, ?, ?)",
-            ((sha256, day, names, blob, zlib.crc32(blob)) for day, blob in zip(panel.days, blobs, strict=True)),
+        days = np.array(panel.days, dtype="<i8").tobytes()
+        closes = panel.values.astype("<f8").tobytes()
+        self._rows("INSERT OR IGNORE INTO names (joined) VALUES (?)", (joined,))
+        self._rows(
+            "INSERT OR REPLACE INTO panel SELECT ?, id, ?, ?, ? FROM names WHERE joined = ?",
+            (sha256, days, closes, _sum(sha256, joined, days, closes), joined),
         )
-        self._db.execute("INSERT INTO stored VALUES (?)", (sha256,))
-        self._db.execute("COMMIT")
-        self._panels[sha256] = panel
 
     def panel(self, file: UsedFile) -> Panel:
         """The values of an accepted file of prices or rates."""
@@ -113,24 +119,24 @@ class History:
         return self._panels[file.sha256]
 
     def _stored_panel(self, sha256: str) -> Panel | None:
-        if not self._db.execute("SELECT 1 FROM stored WHERE sha256 = ?", (sha256,)).fetchone():
-            return None
-        rows = self._db.execute(
-            "SELECT ordinal, joined, closes, sum FROM day JOIN names ON names.id = day.names"
-            " WHERE sha256 = ? ORDER BY ordinal",
+        for joined, days, closes, total in self._rows(
+            "SELECT joined, days, closes, sum FROM panel JOIN names ON names.id = panel.names WHERE sha256 = ?",
             (sha256,),
-        ).fetchall()
-        if not rows or any(zlib.crc32(blob) != total for _, _, blob, total in rows):
-            return None
-        names = tuple(rows[0][1].split("\n")) if rows[0][1] else ()
-        values = np.frombuffer(b"".join(row[2] for row in rows), dtype="<f8").reshape(len(rows), len(names))
-        return Panel(tuple(row[0] for row in rows), names, values)
+        ):
+            if _sum(sha256, joined, days, closes) == total:
+                return self._unpacked(joined, np.frombuffer(days, dtype="<i8"), np.frombuffer(closes, dtype="<f8"))
+        return None
+
+    def _unpacked(self, joined: str, days: Integers, closes: Floats) -> Panel:
+        if joined not in self._lists:
+            self._lists[joined] = tuple(joined.split("\n")) if joined else ()
+        names = self._lists[joined]
+        return Panel(tuple(days.tolist()), names, closes.reshape(len(days), len(names)))
 
     def _parse_panel(self, file: UsedFile) -> Panel:
         content = self.parsed(file).content
         if not isinstance(content, Panel):
             raise TypeError(f"{file.file} is not a file of prices or rates")
-        self._db.execute("DELETE FROM stored WHERE sha256 = ?", (file.sha256,))
         self.keep(file.sha256, content)
         return content
 
@@ -157,22 +163,44 @@ class History:
             values[target] = np.where(np.isnan(block), values[target], block)
         return days, names, values
 
+    def _rows(self, statement: str, values: Sequence[object] = ()) -> list[tuple[Any, ...]]:
+        """Run one statement; its rows. Raises DuskcheckError when the disk or another process is in the way."""
+        try:
+            return self._run(statement, values)
+        except sqlite3.Error as error:
+            if getattr(error, "sqlite_errorcode", sqlite3.SQLITE_CORRUPT) & 0xFF not in BROKEN:
+                raise DuskcheckError(
+                    f"{self._path} cannot be used: {error}. It is a cache: check the disk's free space and "
+                    "permissions, or delete it, and run the command again"
+                ) from error
+        self.close()
+        self._path.unlink(missing_ok=True)
+        return self._run(statement, values)
 
-def _open(path: Path) -> sqlite3.Connection:
-    try:
-        return _ready(path)
-    except sqlite3.DatabaseError:
-        path.unlink()
-        return _ready(path)
+    def _run(self, statement: str, values: Sequence[object]) -> list[tuple[Any, ...]]:
+        if self._db is None:
+            self._db = _opened(self._path)
+        return self._db.execute(statement, values).fetchall()
 
 
-def _ready(path: Path) -> sqlite3.Connection:
+def _opened(path: Path) -> sqlite3.Connection:
     db = sqlite3.connect(path, isolation_level=None, timeout=30)
-    db.executescript("PRAGMA journal_mode=MEMORY; PRAGMA synchronous=OFF;")
-    (found,) = db.execute("PRAGMA user_version").fetchone()
-    if found != FORMAT:
-        tables = [name for (name,) in db.execute("SELECT name FROM sqlite_master WHERE type = 'table'")]
-        for name in tables:
-            db.execute(f'DROP TABLE "{name}"')
-        db.executescript(TABLES + f"PRAGMA user_version={FORMAT};")
+    try:
+        db.executescript("PRAGMA journal_mode=MEMORY; PRAGMA synchronous=OFF;")
+        (found,) = db.execute("PRAGMA user_version").fetchone()
+        if found != FORMAT:
+            tables = [name for (name,) in db.execute("SELECT name FROM sqlite_master WHERE type = 'table'")]
+            for name in tables:
+                db.execute(f'DROP TABLE "{name}"')
+            db.executescript(TABLES + f"PRAGMA user_version={FORMAT};")
+    except sqlite3.Error:
+        db.close()
+        raise
     return db
+
+
+def _sum(*parts: str | bytes) -> int:
+    total = 0
+    for part in parts:
+        total = zlib.crc32(part if isinstance(part, bytes) else part.encode(), total)
+    return total

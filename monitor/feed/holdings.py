@@ -15,8 +15,6 @@ from monitor.feed.known import Known
 from monitor.words import FileKind
 from monitor.world import Book, Firm, Holdings, Nav
 
-NAV_SEARCH = timedelta(days=40)  # longer than any nav_age that a site may set
-
 
 def collect_holdings(
     on: date, firm: Firm, known: Known, history: History, calendars: Mapping[str, Sessions]
@@ -67,10 +65,14 @@ def _positions(file: UsedFile, history: History) -> PositionRows:
 def latest_nav(
     book: Book, on: date, nav_age: int, known: Known, history: History, calendars: Mapping[str, Sessions]
 ) -> Nav:
-    """The newest NAV dated on or before a date, if it is not older than `nav_age` business days of the book."""
+    """The newest NAV dated on or before a date, if it is not older than `nav_age` business days of the book.
+
+    The search goes further back than that, so that the reason can say how old the newest one is.
+    """
+    since = on - timedelta(days=40 + 2 * nav_age)
     rows = [
         row
-        for file in known.files(FileKind.NAV, since=on - NAV_SEARCH)
+        for file in known.files(FileKind.NAV, since=since)
         for row in _nav_rows(file, history)
         if row.book == book.id and row.on <= on
     ]

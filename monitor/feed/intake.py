@@ -7,7 +7,7 @@ import os
 import sqlite3
 import stat
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 from monitor.facts import FileAccepted, FileRefused
@@ -73,6 +73,7 @@ def take(
     """
     decided = decisions(index)
     seen = history.seen()
+    words = replace(words, knows_calendar=history.knows_calendar)
     for file in lying:
         name = read_name(file.name, patterns)
         identity = (name.kind, name.source, name.day) if name else None

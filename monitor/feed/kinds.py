@@ -9,6 +9,7 @@ from datetime import date
 import numpy as np
 
 from monitor.feed.tables import Table, read_table
+from monitor.reading.values import shown
 from monitor.words import FileKind, Finding, InstrumentKind, did_you_mean
 from monitor.world import Floats, Instrument
 
@@ -51,6 +52,7 @@ class Vocabulary:
 
     books: tuple[str, ...] | None = None
     currencies: frozenset[str] | None = None
+    knows_calendar: Callable[[str], bool] | None = None
 
     def has_currency(self, code: str) -> bool:
         return self.currencies is None or code in self.currencies
@@ -135,7 +137,7 @@ def _pairs(table: Table, words: Vocabulary) -> tuple[list[str], list[float]]:
     for at, (pair, rate) in enumerate(zip(pairs, rates, strict=True)):
         if not (words.has_currency(pair[:3]) and words.has_currency(pair[3:])) or pair[:3] == pair[3:]:
             expected = "two ISO 4217 codes, as EURUSD: what one EUR costs in USD"
-            table.wrong(at, "pair", f"{pair!r} as pair", expected)
+            table.wrong(at, "pair", f"{shown(pair)} as pair", expected)
         if rate <= 0:
             table.wrong(at, "rate", f"the rate {rate:g}", "a rate above zero")
     return pairs, rates
@@ -145,7 +147,7 @@ def _known_currencies(table: Table, column: str, words: Vocabulary, empty: bool 
     codes = table.names(column, empty)
     for at, code in enumerate(codes):
         if not words.has_currency(code) and not (empty and not code):
-            table.wrong(at, column, f"{code!r} as {column}", "an ISO 4217 currency, as EUR")
+            table.wrong(at, column, f"{shown(code)} as {column}", "an ISO 4217 currency, as EUR")
     return codes
 
 
@@ -154,7 +156,7 @@ def _known_books(table: Table, words: Vocabulary) -> list[str]:
     for at, book in enumerate(books):
         if words.books is not None and book not in words.books:
             expected = "one of " + ", ".join(words.books)
-            table.wrong(at, "book", f"the book {book!r}", expected, did_you_mean(book, words.books))
+            table.wrong(at, "book", f"the book {shown(book)}", expected, did_you_mean(book, words.books))
     return books
 
 
@@ -171,7 +173,7 @@ def _positions(table: Table, day: date | None, words: Vocabulary) -> Parsed:
         if not instrument and quantities[at] != 0:
             table.wrong(at, "instrument", "a quantity without an instrument", "the instrument, or no quantity")
         if instrument and not given[at]:
-            table.wrong(at, "quantity", f"no quantity of {instrument}", "a number; 0 when it is sold")
+            table.wrong(at, "quantity", f"no quantity of {shown(instrument)}", "a number; 0 when it is sold")
         if instrument and books[at] in flat:
             table.wrong(at, "book", f"a position of {books[at]}, which another row says is flat", "one or the other")
     if table.has("lot"):
@@ -206,17 +208,17 @@ def _instruments(table: Table, _day: date | None, words: Vocabulary) -> Parsed:
     currencies = _known_currencies(table, "currency", words)
     kinds = [_kind(table, at, text) for at, text in enumerate(table.texts("kind"))] if table.has("kind") else []
     multipliers = table.numbers("multiplier", empty=1.0) if table.has("multiplier") else []
-    calendars = table.names("calendar", empty=True) if table.has("calendar") else []
+    calendars = _known_calendars(table, words) if table.has("calendar") else []
     expiries = table.days("expiry", empty=date.max) if table.has("expiry") else []
     tags = [name for name in table.columns if name not in INSTRUMENT_FIELDS]
-    values = {name: table.texts(name) for name in tags}
+    values = {name: table.names(name, empty=True) for name in tags}
     for at, multiplier in enumerate(multipliers):
         if multiplier <= 0:
             table.wrong(at, "multiplier", f"the multiplier {multiplier:g}", "a number above zero")
     for at, kind in enumerate(kinds):
         if kind is InstrumentKind.FUTURE and (not expiries or expiries[at] == date.max):
             column = "expiry" if expiries else "kind"
-            table.wrong(at, column, f"the future {names[at]} without an expiry", "a date in the column expiry")
+            table.wrong(at, column, f"the future {shown(names[at])} without an expiry", "a date in the column expiry")
     if table.findings:
         return Parsed((), len(names), None, None)
     made = tuple(
@@ -234,6 +236,17 @@ def _instruments(table: Table, _day: date | None, words: Vocabulary) -> Parsed:
     return Parsed(made, len(made), None, None)
 
 
+def _known_calendars(table: Table, words: Vocabulary) -> list[str]:
+    calendars = table.names("calendar", empty=True)
+    if words.knows_calendar is not None:
+        unknown = {name for name in set(calendars) if name and not words.knows_calendar(name)}
+        for at, name in enumerate(calendars):
+            if name in unknown:
+                expected = "the ISO 10383 code of an exchange, as XDUB"
+                table.wrong(at, "calendar", f"the calendar {shown(name)}", expected, "Leave it out for the book's.")
+    return calendars
+
+
 def _kind(table: Table, at: int, text: str) -> InstrumentKind:
     known = [kind.value for kind in InstrumentKind]
     if not text:
@@ -241,7 +254,7 @@ def _kind(table: Table, at: int, text: str) -> InstrumentKind:
     if text in LATER_KINDS:
         table.wrong(at, "kind", f"the kind {text!r}, which is not there yet", "one of " + ", ".join(known))
     elif text not in known:
-        table.wrong(at, "kind", f"the kind {text!r}", "one of " + ", ".join(known), did_you_mean(text, known))
+        table.wrong(at, "kind", f"the kind {shown(text)}", "one of " + ", ".join(known), did_you_mean(text, known))
     else:
         return InstrumentKind(text)
     return InstrumentKind.EQUITY

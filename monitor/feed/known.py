@@ -7,7 +7,7 @@ from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from datetime import date
 
-from monitor.facts import Entry, FileAccepted, FileRefused, UsedFile
+from monitor.facts import Entry, FileAccepted, FileRefused, SettingsAdopted, UsedFile
 from monitor.words import FileKind
 
 TABLES = """
@@ -18,6 +18,7 @@ CREATE TABLE refused (
     seq INTEGER PRIMARY KEY, name TEXT, kind TEXT, source TEXT, day TEXT, sha256 TEXT, reason TEXT) STRICT;
 CREATE INDEX refused_name ON refused (name, sha256);
 CREATE INDEX refused_day ON refused (day);
+CREATE TABLE settings_adopted (seq INTEGER PRIMARY KEY) STRICT;
 """
 
 
@@ -43,6 +44,8 @@ def record(index: sqlite3.Connection, entry: Entry) -> None:
             "INSERT INTO refused VALUES (?, ?, ?, ?, ?, ?, ?)",
             (entry.seq, fact.name, fact.file, fact.source, _text(fact.day), fact.sha256, reason),
         )
+    elif isinstance(fact, SettingsAdopted):
+        index.execute("INSERT INTO settings_adopted VALUES (?)", (entry.seq,))
 
 
 def _text(day: date | None) -> str:
@@ -87,18 +90,22 @@ class Known:
 
 @dataclass(frozen=True)
 class Decisions:
-    """What was decided last. in_effect: hash by kind, source and day. refused: hash by name, of files not mended."""
+    """What was decided last. in_effect: hash by kind, source and day. refused: hash by name, of files not mended.
+
+    A refusal stands under the settings that it was made with: other books, currencies or patterns might take the file.
+    """
 
     in_effect: Mapping[tuple[str, str, str], str]
     refused: Mapping[str, str | None]
 
     def stands(self, name: str, identity: tuple[FileKind, str, date | None] | None, sha256: str | None) -> bool:
         """Whether this very content was decided about under this name."""
-        if identity is not None and sha256 is not None:
-            kind, source, day = identity
-            if self.in_effect.get((kind, source, _text(day))) == sha256:
-                return True
-        return name in self.refused and self.refused[name] == sha256
+        if name in self.refused:
+            return self.refused[name] == sha256
+        if identity is None or sha256 is None:
+            return False
+        kind, source, day = identity
+        return self.in_effect.get((kind, source, _text(day))) == sha256
 
 
 def decisions(index: sqlite3.Connection) -> Decisions:
@@ -106,6 +113,7 @@ def decisions(index: sqlite3.Connection) -> Decisions:
     refused = index.execute(
         "SELECT name, sha256 FROM (SELECT name, sha256, MAX(seq) AS last FROM refused GROUP BY name) AS r"
         " WHERE NOT EXISTS (SELECT 1 FROM accepted AS a WHERE a.name = r.name AND a.seq > r.last)"
+        " AND last > (SELECT COALESCE(MAX(seq), 0) FROM settings_adopted)"
     )
     return Decisions(
         {(kind, source, day): sha256 for kind, source, day, sha256, _ in accepted},

@@ -9,12 +9,15 @@ import re
 from collections.abc import Sequence
 from dataclasses import dataclass, field
 from datetime import date
+from difflib import get_close_matches
 
+from monitor.reading.values import shown
 from monitor.words import Finding, did_you_mean
 
-NUMBER = re.compile(r"[+-]?(\d+(\.\d*)?|\.\d+)([eE][+-]?\d+)?")
-DAY = re.compile(r"\d{4}-\d{2}-\d{2}")
+NUMBER = re.compile(r"[+-]?(\d+(\.\d*)?|\.\d+)([eE][+-]?\d+)?", re.ASCII)
+DAY = re.compile(r"\d{4}-\d{2}-\d{2}", re.ASCII)
 MOST_FINDINGS = 20
+SURELY_MEANT = 0.85  # a column this near to a known one is a slip, and not a tag of the site's own
 
 
 @dataclass
@@ -35,11 +38,11 @@ class Table:
         return column in self.columns
 
     def names(self, column: str, empty: bool = False) -> list[str]:
-        """Identifiers of a column, kept as written; blank ones and ones with blanks around them are findings."""
+        """Identifiers of a column, kept as written; those that would not print as they are on one line are findings."""
         texts = self.texts(column)
         for at, text in enumerate(texts):
-            if (not text and not empty) or text != text.strip():
-                self.wrong(at, column, f"{text!r} as {column}", "a name without blanks around it")
+            if (not text and not empty) or not _is_name(text):
+                self.wrong(at, column, f"{shown(text)} as {column}", "a name that prints on one line, no blanks around")
         return texts
 
     def numbers(self, column: str, empty: float | None = None) -> list[float]:
@@ -51,7 +54,7 @@ class Table:
                 continue
             number = float(text) if NUMBER.fullmatch(text) else math.nan
             if not math.isfinite(number):
-                self.wrong(at, column, f"{text!r} as {column}", "a finite number with a decimal point")
+                self.wrong(at, column, f"{shown(text)} as {column}", "a finite number with a decimal point")
             numbers.append(number)
         return numbers
 
@@ -60,7 +63,7 @@ class Table:
         for at, text in enumerate(self.texts(column)):
             day = empty if not text else read_day(text)
             if day is None:
-                self.wrong(at, column, f"{text!r} as {column}", "a date such as 2026-01-31")
+                self.wrong(at, column, f"{shown(text)} as {column}", "a date such as 2026-01-31")
             days.append(day or date.min)
         return days
 
@@ -70,13 +73,19 @@ class Table:
         for at, key in enumerate(keys):
             if key in first:
                 told = " ".join(key)
-                self.wrong(at, column, f"a second row of {told}", f"one row, as in line {self.lines[first[key]]}")
+                self.wrong(
+                    at, column, f"a second row of {shown(told)}", f"one row, as in line {self.lines[first[key]]}"
+                )
             first.setdefault(key, at)
 
     def wrong(self, at: int, column: str, found: str, expected: str, remedy: str = "") -> None:
         place = self.columns[column]
         offset = 1 + sum(len(cell) + 1 for cell in self.rows[at][:place])
         self.findings.append(Finding(self.file, self.lines[at], offset, found, expected, remedy))
+
+
+def _is_name(text: str) -> bool:
+    return text.isprintable() and text == text.strip()
 
 
 def read_day(text: str) -> date | None:
@@ -124,11 +133,15 @@ def _text(file: str, data: bytes, findings: list[Finding]) -> str | None:
     try:
         return data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
-        before = data[: error.start]
-        column = error.start - (before.rfind(b"\n") + 1) + 1
-        found = f"the byte 0x{data[error.start]:02x}"
-        findings.append(Finding(file, before.count(b"\n") + 1, column, found, "text in UTF-8"))
+        read = error.object[: error.start].decode("utf-8")  # the error counts from behind a byte order mark
+        column = len(read) - read.rfind("\n")
+        found = f"the byte 0x{error.object[error.start]:02x}"
+        findings.append(Finding(file, read.count("\n") + 1, column, found, "text in UTF-8"))
         return None
+
+
+def _meant(name: str, known: Sequence[str]) -> bool:
+    return bool(get_close_matches(name.lower(), known, 1, SURELY_MEANT))
 
 
 def _columns(
@@ -144,10 +157,11 @@ def _columns(
     for place, name in enumerate(header):
         offset = 1 + sum(len(cell) + 1 for cell in header[:place])
         if name in columns:
-            findings.append(Finding(file, 1, offset, f"a second column {name!r}", "each column once"))
-        elif name not in known and not (extra and name.strip() == name and name):
-            expected = "one of " + ", ".join(known)
-            findings.append(Finding(file, 1, offset, f"the column {name!r}", expected, did_you_mean(name, known)))
+            findings.append(Finding(file, 1, offset, f"a second column {shown(name)}", "each column once"))
+        elif name not in known and not (extra and name and _is_name(name) and not _meant(name, known)):
+            expected = "one of " + ", ".join(known) + (", or a tag of the site's own" if extra else "")
+            remedy = did_you_mean(name.lower(), known)
+            findings.append(Finding(file, 1, offset, f"the column {shown(name)}", expected, remedy))
         columns.setdefault(name, place)
     for name in required:
         if name not in columns:

@@ -8,7 +8,7 @@ from typing import Any
 
 from monitor.facts import EveningMissed, RulesAdopted, SettingsAdopted
 from monitor.notices import figures
-from monitor.notices.excess_notices import cured_notices, opened_notices, voided_notices
+from monitor.notices.excess_notices import cured_notices, opened_notices, void_section, voided_notices
 from monitor.notices.excess_words import EXCESS_COLUMNS, excess_data, excess_row
 from monitor.notices.message import Notice, Topic, one_line
 from monitor.notices.news import EveningNews, PastEvening, SummaryNews, record
@@ -40,18 +40,19 @@ def compose_summary(news: SummaryNews) -> list[Notice]:
     not_quiet = [e for e in news.evenings if e.outcome in (Outcome.OVER, Outcome.INCOMPLETE)]
     story = Story(
         Tone.OVER if news.alive else Tone.CALM,
-        f"CHECKED LATE: {news.site}, {checked} of {span}; {still} still open after the last.",
+        f"CHECKED LATE: {news.site}, {checked} of {span}; {still} still open.",
         (
             f"These evenings were checked days after their date (a first start, or a long outage), so they are told in "
             f"this one summary and not one by one. Outcomes: {said}.",
         ),
         (
             Section(
-                f"Excesses still open ({len(oldest):,}), oldest first",
+                f"Excesses open ({len(oldest):,}), oldest first, days counted to {figures.day(news.aged_on)}",
                 lines=() if oldest else ("none",),
                 table=table(EXCESS_COLUMNS, [excess_row(e, d, news.rules) for e, d in oldest]) if oldest else None,
             ),
             Section("What happened", (("Excesses opened", f"{len(news.opened):,}"), ("Cured", f"{len(news.cured):,}"))),
+            *void_section(news.voided, news.rules),
             *(
                 (
                     Section(
@@ -69,7 +70,8 @@ def compose_summary(news: SummaryNews) -> list[Notice]:
         record(news.seq, news.hash, news.page),
     )
     text, html = render(story)
-    told = [rule.tell for e in news.alive if (rule := news.rules.get(e.rule)) is not None]
+    told = [rule.tell for e in (*news.alive, *news.voided) if (rule := news.rules.get(e.rule)) is not None]
+    told += [news.told[excess.id] for excess in news.voided]
     tell = tuple(dict.fromkeys((news.nightly, *(name for names in told for name in names))))
     data = {
         "site": news.site,
@@ -79,6 +81,7 @@ def compose_summary(news: SummaryNews) -> list[Notice]:
         "outcomes": {outcome.value: number for outcome, number in by_outcome.items()},
         "opened": len(news.opened),
         "cured": len(news.cured),
+        "voided": [excess_data(excess) for excess in news.voided],
         "excesses_open": len(news.alive),
         "excesses": [excess_data(excess, day) for excess, day in oldest],
         "page": news.page,

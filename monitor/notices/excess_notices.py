@@ -2,25 +2,33 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Collection, Iterable, Mapping
 from itertools import groupby
 from typing import Any
 
 from monitor.excesses.register import Excess
 from monitor.notices import figures
-from monitor.notices.excess_words import answer_data, doubts, excess_data, figure_facts, past_limit, worst_of
+from monitor.notices.excess_words import (
+    answer_data,
+    doubts,
+    excess_data,
+    figure_facts,
+    last_over,
+    past_limit,
+    worst_of,
+)
 from monitor.notices.message import Notice, Topic, one_line
 from monitor.notices.news import EveningNews, evening_data, record, when
 from monitor.notices.story import LISTED, Section, Story, Tone, render, table
 from monitor.words import CuredBy, Standing
-from monitor.world import Answer
+from monitor.world import Answer, Rule
 
 DIGEST_ABOVE = 20
 
 _CURED_BY = {
     CuredBy.FIGURE: "its figure is back within the limit",
     CuredBy.END_OF_RULE: "its rule is no longer in force; the figure itself may still be as high",
-    CuredBy.END_OF_SUBJECT: "its subject is no longer held",
+    CuredBy.END_OF_SUBJECT: "its subject is no longer held, or its rule no longer asks about it",
 }
 
 
@@ -59,10 +67,10 @@ def _by_rule(pairs: Iterable[tuple[Excess, Any]]) -> list[tuple[str, list[tuple[
     return [(rule, list(found)) for rule, found in groupby(ordered, key=lambda pair: pair[0].rule)]
 
 
-def _tell(news: EveningNews, rule: str) -> tuple[str, ...]:
-    """The rule's groups; those of the nightly note for a rule that names none or is no longer there."""
+def _tell(news: EveningNews, rule: str, told: Iterable[str] = ()) -> tuple[str, ...]:
+    """The rule's groups (those of the nightly note where it names none or is no longer there) and whoever was told."""
     found = news.rules.get(rule)
-    return found.tell if found and found.tell else (news.nightly,)
+    return tuple(dict.fromkeys([*(found.tell if found and found.tell else (news.nightly,)), *told]))
 
 
 def _rule_facts(news: EveningNews, rule: str) -> tuple[tuple[str, str], ...]:
@@ -78,7 +86,16 @@ def _rule_facts(news: EveningNews, rule: str) -> tuple[tuple[str, str], ...]:
     )
 
 
-def _notice(news: EveningNews, topic: Topic, key: str, rule: str, title: str, story: Story, data: Any) -> Notice:
+def _notice(
+    news: EveningNews,
+    topic: Topic,
+    key: str,
+    rule: str,
+    title: str,
+    story: Story,
+    data: Any,
+    told: Iterable[str] = (),
+) -> Notice:
     text, html = render(story)
     found = news.rules.get(rule)
     about = {
@@ -88,28 +105,23 @@ def _notice(news: EveningNews, topic: Topic, key: str, rule: str, title: str, st
         "owner": found.owner if found else None,
     }
     return Notice(
-        topic, key, one_line(title), _tell(news, rule), text, html, {**evening_data(news), "rule": about, **data}
+        topic, key, one_line(title), _tell(news, rule, told), text, html, {**evening_data(news), "rule": about, **data}
     )
 
 
-def _opened(news: EveningNews, excess: Excess, answer: Answer) -> Notice:
+def _opened(news: EveningNews, excess: Excess, answer: Answer | None) -> Notice:
     day = news.alive.get(excess)
     age = f"day {day}" if day is not None else f"already {excess.state.value}"
-    value = figures.value_of(answer)
-    headline = (
-        f"OVER: {figures.measure_name(answer.measure)} of {excess.subject.name} is {value}, {past_limit(answer)}"
-        + (f" (utilisation {figures.utilisation(answer.utilisation)})." if answer.utilisation is not None else ".")
-    )
+    value, limit = last_over(excess, answer, news.rules)
     story = Story(
         Tone.OVER,
-        headline,
+        _over(news, excess, answer),
         (
-            f"The excess opened with this evening's check and stands at {age}. It stays open, and in every nightly "
-            "note, until the figure is within its limit again.",
+            f"{_how_it_opened(news, excess)} It stands at {age}. It stays open, and in every nightly note, until the "
+            "figure is within its limit again.",
         ),
         (
-            Section("The figure", (("Subject", excess.subject.name), *figure_facts(answer))),
-            *doubts(answer),
+            *_figure(excess, answer, news.rules),
             Section("The rule", _rule_facts(news, excess.rule)),
             Section(
                 "The evening",
@@ -118,24 +130,53 @@ def _opened(news: EveningNews, excess: Excess, answer: Answer) -> Notice:
         ),
         record(news.seq, news.hash, news.page),
     )
-    title = (
-        f"OVER: {excess.rule} of {excess.subject.name}, {value} against {figures.limit_of(answer)} "
-        f"({figures.day(news.recipe.date)})"
-    )
-    data = {"excess": excess_data(excess, day), "standing": answer_data(answer)}
+    title = f"OVER: {excess.rule} of {excess.subject.name}, {value} against {limit} ({figures.day(excess.last_on)})"
+    data = {"excess": excess_data(excess, day), "standing": answer_data(answer) if answer is not None else None}
     return _notice(news, Topic.EXCESS_OPENED, excess.id, excess.rule, title, story, data)
 
 
-def _opened_digest(news: EveningNews, rule: str, pairs: list[tuple[Excess, Answer]]) -> Notice:
+def _over(news: EveningNews, excess: Excess, answer: Answer | None) -> str:
+    rule = news.rules.get(excess.rule)
+    what = f"{figures.measure_name(rule.measure.name) if rule else excess.rule} of {excess.subject.name}"
+    if answer is None:
+        value, limit = last_over(excess, answer, news.rules)
+        return f"OVER: {what} was {value} against its limit of {limit} on {figures.day(excess.last_on)}."
+    used = f" (utilisation {figures.utilisation(answer.utilisation)})" if answer.utilisation is not None else ""
+    return f"OVER: {what} is {figures.value_of(answer)}, {past_limit(answer)}{used}."
+
+
+def _how_it_opened(news: EveningNews, excess: Excess) -> str:
+    opened, checked = figures.day(excess.opened_on), figures.day(news.recipe.date)
+    if excess.id in news.on_record:
+        return f"The excess opened on {opened} and was told as cured; the check of {checked} takes that cure back."
+    if excess.opened_on == news.recipe.date:
+        return "The excess opened with this evening's check."
+    return f"The excess opened on {opened}, as the check of {checked} shows."
+
+
+def _figure(excess: Excess, answer: Answer | None, rules: Mapping[str, Rule]) -> tuple[Section, ...]:
+    """Tonight's figure; where another evening's decided, what the register holds of it."""
+    subject = ("Subject", excess.subject.name)
+    if answer is not None:
+        return (Section("The figure", (subject, *figure_facts(answer))), *doubts(answer))
+    value, limit = last_over(excess, None, rules)
+    last = f"{value} on {figures.day(excess.last_on)}"
+    return (
+        Section("The figure", (subject, ("Last over", last), ("Limit", limit), ("Worst", worst_of(excess, rules)))),
+    )
+
+
+def _opened_digest(news: EveningNews, rule: str, pairs: list[tuple[Excess, Answer | None]]) -> Notice:
     worst = sorted(pairs, key=lambda pair: pair[0].worst_distance, reverse=True)
     found = news.rules.get(rule)
     named = f"{rule} ({found.title})" if found else rule
     number = figures.count(len(pairs), "subject")
     excess, answer = worst[0]
+    value, limit = last_over(excess, answer, news.rules)
     story = Story(
         Tone.OVER,
-        f"OVER: {number} of rule {named} went over on one evening; the worst, {excess.subject.name}, "
-        f"is {figures.value_of(answer)}, {past_limit(answer)}.",
+        f"OVER: {number} of rule {named} went over at once; the worst, {excess.subject.name}, is {value} against its "
+        f"limit of {limit}.",
         (
             "So many at once often have one cause: a move of the whole market, a wrong file or a changed rule. "
             "Look for that before looking at each. Every one of them is an excess of its own in the ledger.",
@@ -148,16 +189,15 @@ def _opened_digest(news: EveningNews, rule: str, pairs: list[tuple[Excess, Answe
                     [
                         (
                             e.subject.name,
-                            figures.value_of(a),
-                            figures.limit_of(a),
-                            figures.utilisation(a.utilisation),
-                            figures.figure(a.distance, a.unit, a.currency, a.measure) if a.distance else "",
+                            *last_over(e, a, news.rules),
+                            figures.utilisation(a.utilisation) if a else "",
+                            figures.figure(a.distance, a.unit, a.currency, a.measure) if a and a.distance else "",
                         )
                         for e, a in worst
                     ],
                 ),
             ),
-            Section("How the worst figure was made", figure_facts(answer)),
+            *((Section("How the worst figure was made", figure_facts(answer)),) if answer else ()),
             Section("The rule", _rule_facts(news, rule)),
             Section("The evening", when(news)),
         ),
@@ -166,7 +206,7 @@ def _opened_digest(news: EveningNews, rule: str, pairs: list[tuple[Excess, Answe
     data = {
         "change": "opened",
         "number": len(pairs),
-        "worst": [{"excess": e.id, "standing": answer_data(a)} for e, a in worst[:LISTED]],
+        "worst": [{"excess": e.id, "standing": answer_data(a) if a else None} for e, a in worst[:LISTED]],
     }
     title = f"OVER: {rule}, {number} at once ({figures.day(news.recipe.date)})"
     return _notice(news, Topic.RULE_DIGEST, f"{rule}:opened", rule, title, story, data)
@@ -174,24 +214,20 @@ def _opened_digest(news: EveningNews, rule: str, pairs: list[tuple[Excess, Answe
 
 def _cured(news: EveningNews, excess: Excess, answer: Answer | None) -> Notice:
     why = _CURED_BY[excess.cured_by] if excess.cured_by else "its figure is back within the limit"
-    if answer is not None and answer.value is not None:
-        now = f"it is now {figures.value_of(answer)}, {past_limit(answer)}"
-        still = " It is still near." if answer.standing is Standing.NEAR else ""
-    else:
-        now, still = "there is no figure of it tonight", ""
+    cured_on = figures.day(excess.cured_on)
+    still = " It is still near." if answer is not None and answer.standing is Standing.NEAR else ""
+    unheard = (
+        "" if excess.id in news.on_record else f" The check of {figures.day(news.recipe.date)} shows both only now."
+    )
     story = Story(
         Tone.CALM,
-        f"CURED: {excess.rule} of {excess.subject.name}, because {why}; {now}.",
+        f"CURED: {excess.rule} of {excess.subject.name}, because {why}; {_figure_at_cure(excess, answer, news.rules)}.",
         (
-            f"The excess opened on {figures.day(excess.opened_on)}; "
-            f"its worst was {worst_of(excess, news.rules)}.{still}",
+            f"The excess opened on {figures.day(excess.opened_on)} and was cured on {cured_on}; "
+            f"its worst was {worst_of(excess, news.rules)}.{unheard}{still}",
         ),
         (
-            *(
-                (Section("The figure", (("Subject", excess.subject.name), *figure_facts(answer))), *doubts(answer))
-                if answer is not None
-                else ()
-            ),
+            *(_figure(excess, answer, news.rules) if answer is not None else ()),
             Section("The rule", _rule_facts(news, excess.rule)),
             Section(
                 "The evening",
@@ -199,7 +235,7 @@ def _cured(news: EveningNews, excess: Excess, answer: Answer | None) -> Notice:
                     *when(news),
                     ("Excess", excess.id),
                     ("Opened on", figures.day(excess.opened_on)),
-                    ("Cured on", figures.day(excess.cured_on or news.recipe.date)),
+                    ("Cured on", cured_on),
                     ("Worst", worst_of(excess, news.rules)),
                 ),
             ),
@@ -207,8 +243,18 @@ def _cured(news: EveningNews, excess: Excess, answer: Answer | None) -> Notice:
         record(news.seq, news.hash, news.page),
     )
     data = {"excess": excess_data(excess), "standing": answer_data(answer) if answer is not None else None}
-    title = f"CURED: {excess.rule} of {excess.subject.name} ({figures.day(news.recipe.date)})"
+    title = f"CURED: {excess.rule} of {excess.subject.name} ({cured_on})"
     return _notice(news, Topic.EXCESS_CURED, excess.id, excess.rule, title, story, data)
+
+
+def _figure_at_cure(excess: Excess, answer: Answer | None, rules: Mapping[str, Rule]) -> str:
+    if answer is not None and answer.value is not None:
+        return f"it is now {figures.value_of(answer)}, {past_limit(answer)}"
+    if excess.cured_value is None:
+        return "there is no figure of it any more"
+    rule = rules.get(excess.rule)
+    value = figures.figure(excess.cured_value, excess.unit, excess.currency, rule.measure.name if rule else "")
+    return f"it was {value} on {figures.day(excess.cured_on)}"
 
 
 def _cured_digest(news: EveningNews, rule: str, pairs: list[tuple[Excess, Answer | None]]) -> Notice:
@@ -249,11 +295,11 @@ def _cured_digest(news: EveningNews, rule: str, pairs: list[tuple[Excess, Answer
 
 
 def _voided(news: EveningNews, excess: Excess) -> Notice:
-    reason = excess.void_reason or "the evening was checked again on better inputs"
+    opened, reason = figures.day(excess.opened_on), excess.void_reason or ""
     story = Story(
         Tone.DOUBT,
-        f"CORRECTION: {excess.rule} of {excess.subject.name} was not over; the excess told on "
-        f"{figures.day(excess.opened_on)} is void: {reason}.",
+        f"CORRECTION: the excess {excess.id} of {excess.rule}, {excess.subject.name}, opened on {opened}, is void: "
+        f"{reason}.",
         ("You are told because you were told of the excess. Nothing was erased: both stand in the ledger.",),
         (
             Section("The rule", _rule_facts(news, excess.rule)),
@@ -262,7 +308,7 @@ def _voided(news: EveningNews, excess: Excess) -> Notice:
                 (
                     *when(news),
                     ("Excess", excess.id),
-                    ("Had opened on", figures.day(excess.opened_on)),
+                    ("Had opened on", opened),
                     ("Had been at worst", worst_of(excess, news.rules)),
                     ("Void because", reason),
                 ),
@@ -270,28 +316,20 @@ def _voided(news: EveningNews, excess: Excess) -> Notice:
         ),
         record(news.seq, news.hash, news.page),
     )
-    title = f"CORRECTION: {excess.rule} of {excess.subject.name} was not over ({figures.day(excess.opened_on)})"
+    title = f"CORRECTION: {excess.rule} of {excess.subject.name}, the excess opened on {opened} is void"
     data = {"excess": excess_data(excess)}
-    return _notice(news, Topic.EXCESS_VOIDED, excess.id, excess.rule, title, story, data)
+    told = news.told[excess.id]
+    return _notice(news, Topic.EXCESS_VOIDED, excess.id, excess.rule, title, story, data, told)
 
 
 def _voided_digest(news: EveningNews, rule: str, excesses: list[Excess]) -> Notice:
     number = figures.count(len(excesses), "excess", "excesses")
     story = Story(
         Tone.DOUBT,
-        f"CORRECTION: {number} of rule {rule} should never have opened and are void.",
+        f"CORRECTION: {number} of rule {rule} are void.",
         ("You are told because you were told of them. Nothing was erased: both stand in the ledger.",),
         (
-            Section(
-                f"{min(LISTED, len(excesses))} of {len(excesses)}",
-                table=table(
-                    ("subject", "had opened on", "had been at worst", "void because"),
-                    [
-                        (e.subject.name, figures.day(e.opened_on), worst_of(e, news.rules), e.void_reason or "")
-                        for e in sorted(excesses, key=lambda e: e.worst_distance, reverse=True)
-                    ],
-                ),
-            ),
+            *void_section(excesses, news.rules),
             Section("The rule", _rule_facts(news, rule)),
             Section("The evening", when(news)),
         ),
@@ -299,4 +337,22 @@ def _voided_digest(news: EveningNews, rule: str, excesses: list[Excess]) -> Noti
     )
     data = {"change": "voided", "number": len(excesses), "worst": [excess_data(e) for e in excesses[:LISTED]]}
     title = f"CORRECTION: {rule}, {number} void ({figures.day(news.recipe.date)})"
-    return _notice(news, Topic.RULE_DIGEST, f"{rule}:voided", rule, title, story, data)
+    told = [group for excess in excesses for group in news.told[excess.id]]
+    return _notice(news, Topic.RULE_DIGEST, f"{rule}:voided", rule, title, story, data, told)
+
+
+def void_section(voided: Collection[Excess], rules: Mapping[str, Rule]) -> tuple[Section, ...]:
+    """The excesses that a correction showed to be none of their own, worst first."""
+    if not voided:
+        return ()
+    rows = [
+        (
+            f"{e.rule} of {e.subject.name}",
+            figures.day(e.opened_on),
+            worst_of(e, rules),
+            e.void_reason or "",
+        )
+        for e in sorted(voided, key=lambda e: e.worst_distance, reverse=True)
+    ]
+    columns = ("rule and subject", "had opened on", "had been at worst", "void because")
+    return (Section(f"Excesses void after a correction ({len(rows):,})", table=table(columns, rows)),)

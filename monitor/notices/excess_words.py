@@ -76,9 +76,7 @@ EXCESS_COLUMNS = ("rule and subject", "day", "opened on", "last over at", "worst
 
 def excess_row(excess: Excess, day: int | None, rules: Mapping[str, Rule]) -> tuple[str, ...]:
     """The cells of EXCESS_COLUMNS; an excess that is no longer alive shows how it ended in place of its day."""
-    last, limit = figures.against(
-        excess.last_value, excess.level, excess.unit, excess.currency, _measure(rules, excess)
-    )
+    last, limit = last_over(excess, None, rules)
     age = excess.state.value if day is None else f"{day}" if excess.state is ExcessState.OPEN else f"{day} (waived)"
     return (
         f"{excess.rule} of {excess.subject.name}",
@@ -87,6 +85,13 @@ def excess_row(excess: Excess, day: int | None, rules: Mapping[str, Rule]) -> tu
         f"{last}, limit {limit}, on {figures.day(excess.last_on)}",
         worst_of(excess, rules) if excess.worst_on != excess.last_on else "",
     )
+
+
+def last_over(excess: Excess, answer: Answer | None, rules: Mapping[str, Rule]) -> tuple[str, str]:
+    """The value and the limit of tonight's answer; without one, those of the newest evening over."""
+    if answer is not None:
+        return figures.value_of(answer), figures.limit_of(answer)
+    return figures.against(excess.last_value, excess.level, excess.unit, excess.currency, _measure(rules, excess))
 
 
 def worst_of(excess: Excess, rules: Mapping[str, Rule]) -> str:

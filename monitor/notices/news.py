@@ -18,10 +18,13 @@ from monitor.world import Answer, Rule, Standings
 class EveningNews:
     """One evening as it was settled. seq, hash: its `evening.checked` entry.
 
-    rules: by id. opened, voided, cured: what changed tonight; a cure has no answer when its rule or subject is no more.
-    alive: the excesses open or waived after tonight, with the number of their day. refused: files refused since the
-    evening before. before: counts by standing of the evening before, None on the first. nightly: the tell group of
-    the nightly note. page: name of the evening's page, None where none is drawn.
+    rules: by id. opened: alive and new on record, or open again because their cure was taken back. cured: with a new
+    cure. Both come with tonight's answer where that is what opened or cured them. on_record: ids of those opened and
+    cured that were on record before tonight. voided: excesses that were told and should not have been. told: groups by
+    excess that were told when it opened, of those voided. alive: the excesses open or waived after tonight, with the
+    number of their day on `aged_on`, the newest business date on record. refused: files refused since the evening
+    before. before: counts by standing of the evening before, None on the first. nightly: the tell group of the nightly
+    note. page: name of the evening's page, None where none is drawn.
     """
 
     site: str
@@ -31,10 +34,13 @@ class EveningNews:
     hash: str
     standings: Standings
     rules: Mapping[str, Rule]
-    opened: tuple[tuple[Excess, Answer], ...]
+    opened: tuple[tuple[Excess, Answer | None], ...]
     cured: tuple[tuple[Excess, Answer | None], ...]
+    on_record: frozenset[str]
     voided: tuple[Excess, ...]
+    told: Mapping[str, tuple[str, ...]]
     alive: Mapping[Excess, int]
+    aged_on: date
     refused: tuple[FileRefused, ...]
     before: Mapping[str, int] | None
     nightly: str
@@ -56,8 +62,9 @@ class PastEvening:
 class SummaryNews:
     """Evenings that were checked days after their date. seq, hash: the newest of their entries.
 
-    opened, cured: every excess that did so in these evenings. alive: those open or waived after the last, with the
-    number of their day.
+    opened, cured: every excess that did so by the check of these evenings. voided: those that it showed should not
+    have been told; told: groups by excess that were told when it opened. alive: those open or waived by now, with the
+    number of their day on `aged_on`, the newest business date on record.
     """
 
     site: str
@@ -67,7 +74,10 @@ class SummaryNews:
     rules: Mapping[str, Rule]
     opened: tuple[Excess, ...]
     cured: tuple[Excess, ...]
+    voided: tuple[Excess, ...]
+    told: Mapping[str, tuple[str, ...]]
     alive: Mapping[Excess, int]
+    aged_on: date
     nightly: str
     page: str | None
 

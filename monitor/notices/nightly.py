@@ -204,7 +204,7 @@ def _of_standing(news: EveningNews, standing: Standing) -> tuple[Section, ...]:
     if not answers:
         return ()
     ages = {(e.rule, e.subject.key, e.side): (e, day) for e, day in news.alive.items()}
-    tonight = {excess.id for excess, _ in news.opened}
+    tonight = {excess.id for excess, _ in news.opened} - news.on_record
     rows = []
     for answer in answers:
         excess, day = ages.get((answer.rule, answer.subject.key, answer.side), (None, None))
@@ -230,11 +230,17 @@ def _age(excess: Excess, day: int | None, opened_tonight: set[str]) -> str:
 
 def _changes(news: EveningNews) -> tuple[Section, ...]:
     cured = [f"cured: {e.rule} of {e.subject.name}, opened on {figures.day(e.opened_on)}" for e, _ in news.cured]
-    void = [f"void: {e.rule} of {e.subject.name}, told on {figures.day(e.opened_on)}" for e in news.voided]
-    lines = [*cured, *void]
+    void = [f"void: {e.rule} of {e.subject.name}, opened on {figures.day(e.opened_on)}" for e in news.voided]
+    again = [
+        f"open again: {e.rule} of {e.subject.name}, opened on {figures.day(e.opened_on)}; its cure is taken back"
+        for e, _ in news.opened
+        if e.id in news.on_record
+    ]
+    lines = [*again, *cured, *void]
     if not lines:
         return ()
-    return (Section("Excesses ended", table=table(("excess",), [(line,) for line in lines])),)
+    heading = "Excesses ended" if not again else "Excesses ended or open again"
+    return (Section(heading, table=table(("excess",), [(line,) for line in lines])),)
 
 
 def _alive(news: EveningNews) -> tuple[Section, ...]:
@@ -242,7 +248,8 @@ def _alive(news: EveningNews) -> tuple[Section, ...]:
         return (Section("Excesses open", lines=("none",)),)
     oldest = sorted(news.alive.items(), key=lambda pair: (-pair[1], pair[0].rule, pair[0].subject.key))
     rows = [excess_row(excess, day, news.rules) for excess, day in oldest]
-    return (Section(f"Excesses open ({len(rows):,}), oldest first", table=table(EXCESS_COLUMNS, rows)),)
+    counted = "" if news.aged_on == news.recipe.date else f", days counted to {figures.day(news.aged_on)}"
+    return (Section(f"Excesses open ({len(rows):,}), oldest first{counted}", table=table(EXCESS_COLUMNS, rows)),)
 
 
 def _doubts(answers: Iterable[Answer]) -> tuple[Section, ...]:

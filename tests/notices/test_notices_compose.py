@@ -106,7 +106,7 @@ def test_many_cures_and_many_corrections_make_one_notice_each(evening: Make) -> 
     cured = tuple((replace(e, state=ExcessState.CURED, cured_by=CuredBy.FIGURE), a) for e, a in pairs)
     void = tuple(replace(e, state=ExcessState.VOID, void_reason="positions corrected") for e, _ in pairs)
 
-    notices = compose(evening(cured=cured, voided=void))
+    notices = compose(evening(cured=cured, voided=void, told={excess.id: () for excess in void}))
 
     assert [n.topic for n in notices].count(Topic.RULE_DIGEST) == 2
     assert len({n.key for n in notices}) == len(notices) == 3
@@ -186,7 +186,7 @@ def test_a_cure_by_the_end_of_its_rule_is_not_passed_off_as_a_better_figure(even
 def test_whoever_was_told_hears_of_the_correction(bad_evening: EveningNews) -> None:
     notice = the(compose(bad_evening), Topic.EXCESS_VOIDED)
 
-    assert notice.tell == RULES["nq-var"].tell
+    assert notice.tell == (*RULES["nq-var"].tell, "board")
     assert "the positions of 2026-03-03 were corrected" in flat(notice)
 
 
@@ -219,7 +219,7 @@ def test_old_evenings_make_one_summary(evening: Make) -> None:
         PastEvening(EVENING, f"r{i}", Outcome.OVER if i % 2 else Outcome.WITHIN, {"over": i % 2}) for i in range(9)
     )
     news = SummaryNews(
-        "Saltmere Trust", evenings, 1300, HASH, RULES, (excess,), (), {excess: 12}, "night", "2026-03-04.html"
+        "Saltmere Trust", evenings, 1300, HASH, RULES, (excess,), (), (), {}, {excess: 12}, EVENING, "night", "2026-03-04.html"
     )
 
     [notice] = compose_summary(news)
