@@ -9,6 +9,7 @@ from datetime import datetime
 
 import monitor
 from monitor.facts import Hand, NamedFile, RulesAdopted, SettingsAdopted, SiteOpened
+from monitor.feed.build import calendars_of
 from monitor.ledger.chain import Transaction
 from monitor.limits.rules import read_rules
 from monitor.limits.wording import differences
@@ -22,7 +23,8 @@ from monitor.world import Rule
 def adopt(state: State, now: datetime, hand: Hand) -> str:
     """Take the site file and the rule files as they lie there into force; returns the hash that recipes name them by.
 
-    Nothing is recorded when they are what was adopted last. Raises WrongUse when they are wrong.
+    Nothing is recorded when they are what was adopted last. Raises WrongUse when they are wrong or name a calendar that
+    is not known; then nothing is recorded either.
     """
     site = state.site
     settings_hash = _hash(site.data)
@@ -34,6 +36,8 @@ def adopt(state: State, now: datetime, hand: Hand) -> str:
     if last is not None and last[0] == terms_hash:
         return terms_hash
     rules = read_rules(site.rule_files, site.settings.rule_context())
+    for calendar in calendars_of(site.settings.firm()):
+        state.history.sessions(calendar, until=now.date())
     state.archive.put_many([site.data, *(data for _, data in site.rule_files), terms])
     old_terms, old_settings = last or (None, None)
     with state.ledger.transaction(now) as transaction:

@@ -119,8 +119,6 @@ def _record(
             queued = outbox.queue(compose(news), state.site.settings.notices, state.archive, (entry.seq, entry.hash))
             for notice in queued:
                 transaction.append(notice)
-        head = transaction.head
-    state.witness(head)
     found = evenings.latest(state.index(), recipe.date, recipe.round)
     if found is None:
         raise RuntimeError(f"the evening of {recipe.date} was recorded and cannot be found")

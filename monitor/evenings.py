@@ -152,14 +152,18 @@ def untold(index: sqlite3.Connection, after: int) -> list[CheckedEvening]:
     return _rows(index, "WHERE told = 0 AND seq > ? ORDER BY seq", (after,))
 
 
-def last_day(index: sqlite3.Connection, round_id: str) -> date | None:
-    """The newest date of a round that was checked or given up."""
-    (found,) = index.execute(
-        "SELECT MAX(day) FROM (SELECT day FROM evening WHERE round = ?"
-        " UNION ALL SELECT day FROM missed WHERE round = ?)",
-        (round_id, round_id),
-    ).fetchone()
-    return date.fromisoformat(found) if found else None
+def newest(index: sqlite3.Connection, round_id: str) -> CheckedEvening | None:
+    """The newest edition of a round's newest evening."""
+    found = _rows(index, "WHERE round = ? ORDER BY day DESC, edition DESC LIMIT 1", (round_id,))
+    return found[0] if found else None
+
+
+def days_done(index: sqlite3.Connection, round_id: str) -> set[date]:
+    """The dates of a round that were checked or given up."""
+    rows = index.execute(
+        "SELECT day FROM evening WHERE round = ? UNION SELECT day FROM missed WHERE round = ?", (round_id, round_id)
+    )
+    return {date.fromisoformat(day) for (day,) in rows}
 
 
 def _rows(index: sqlite3.Connection, condition: str, values: tuple[Any, ...]) -> list[CheckedEvening]:

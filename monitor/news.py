@@ -57,7 +57,9 @@ def evening_news(
 def summary_news(state: State, untold: list[evenings.CheckedEvening], terms: Terms) -> SummaryNews:
     """Evenings that were checked days after their date, for one summary."""
     last = untold[-1]
-    aged_on = evenings.newest_day(state.index()) or last.recipe.date
+    latest = latest_by_date(untold)
+    shown = latest[-1]
+    aged_on = evenings.newest_day(state.index()) or shown.recipe.date
     register = store.load(state.index())
     facts = _changes_of(state, untold)
     opened, cured, void = (
@@ -66,7 +68,7 @@ def summary_news(state: State, untold: list[evenings.CheckedEvening], terms: Ter
     voided = tuple(excess for excess in register if excess.id in void - opened)
     return SummaryNews(
         site=terms.firm.site,
-        evenings=tuple(_past(state, own) for own in untold),
+        evenings=tuple(_past(state, own) for own in latest),
         seq=last.seq,
         hash=last.hash,
         rules={rule.id: rule for rule in terms.rules},
@@ -77,8 +79,14 @@ def summary_news(state: State, untold: list[evenings.CheckedEvening], terms: Ter
         alive=days_of(state, [excess for excess in register if excess.alive], terms, aged_on),
         aged_on=aged_on,
         nightly=state.site.settings.notices.nightly_note,
-        page=page_name(last.recipe.date, last.recipe.round, last.edition),
+        page=page_name(shown.recipe.date, shown.recipe.round, shown.edition),
     )
+
+
+def latest_by_date(recorded: list[evenings.CheckedEvening]) -> list[evenings.CheckedEvening]:
+    """Of evenings in the order they were recorded the latest edition of each, by date."""
+    latest = {(own.recipe.date, own.recipe.round): own for own in recorded}
+    return sorted(latest.values(), key=lambda own: (own.recipe.date, own.seq))
 
 
 def _changes_of(state: State, untold: list[evenings.CheckedEvening]) -> list[ExcessFact]:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from datetime import date
+from datetime import date, timedelta
 from itertools import pairwise
 from pathlib import Path
 
@@ -10,6 +10,7 @@ from monitor import evenings, results
 from monitor.evenings import CheckedEvening
 from monitor.excesses import store
 from monitor.excesses.register import Excess
+from monitor.ledger.disk import disk_errors
 from monitor.news import days_of
 from monitor.report import pages
 from monitor.report.page import AgedExcess, Before, Listed, Neighbours, Page, Series
@@ -18,15 +19,28 @@ from monitor.words import ExcessState, Subject
 from monitor.world import Standings, Terms
 
 SESSIONS_SHOWN = 250
+LATELY = timedelta(days=10)  # longer back than evenings have notices of their own when they are checked
 
 
 def draw_evening(state: State, evening: CheckedEvening, standings: Standings) -> Path:
     """Write the page of an evening and the list of all evenings; returns the page's path."""
-    written = pages.write(state.site.pages, page_of(state, evening, standings))
-    newest = {own.seq for own in evenings.latest_of_all(state.index())}
-    listed = [_listed(state, own, own.seq in newest) for own in evenings.all_editions(state.index())]
-    pages.write_index(state.site.pages, state.site.settings.site, listed)
+    with disk_errors(f"writing the pages in {state.site.pages}"):
+        written = pages.write(state.site.pages, page_of(state, evening, standings))
+        newest = {own.seq for own in evenings.latest_of_all(state.index())}
+        listed = [_listed(state, own, own.seq in newest) for own in evenings.all_editions(state.index())]
+        pages.write_index(state.site.pages, state.site.settings.site, listed)
     return written
+
+
+def draw_missing(state: State) -> None:
+    """Draw what the newest evenings' notices name and is not there, as after a crash."""
+    recorded = evenings.latest_of_all(state.index())
+    if not recorded:
+        return
+    since = recorded[-1].recipe.date - LATELY
+    for own in recorded:
+        if own.told and own.recipe.date >= since and _drawn(state, own) is None:
+            draw_evening(state, own, results.decode(state.archive.get(own.results)))
 
 
 def page_of(state: State, evening: CheckedEvening, standings: Standings) -> Page:

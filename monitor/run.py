@@ -16,20 +16,23 @@ from monitor.adoption import adopt
 from monitor.evening import Checked, check_evening, recall, take_in
 from monitor.evenings import CheckedEvening
 from monitor.facts import Hand
+from monitor.feed import intake
 from monitor.feed.build import calendars_of, rounds_due
 from monitor.feed.calendars import Sessions
+from monitor.ledger.links import Head
 from monitor.ledger.lock import lock
-from monitor.news import summary_news
+from monitor.news import latest_by_date, summary_news
 from monitor.notices import outbox
 from monitor.notices.compose import compose_summary
 from monitor.notices.delivery import Surroundings
-from monitor.paging import draw_evening
+from monitor.paging import draw_evening, draw_missing
 from monitor.site import Site
 from monitor.state import State, open_state
 from monitor.words import Outcome, WrongUse
 
 OLD_AFTER = 5  # business days after which an evening is told in a summary, not by its own alarms
 LOCK_WAIT = 30
+EVENINGS_WITNESSED = 20  # written again where a crash or a full disk kept them out of the heads file
 
 
 @dataclass(frozen=True)
@@ -63,10 +66,13 @@ def hand() -> Hand:
     return Hand(login, socket.gethostname())
 
 
-def prepare(state: State, now: datetime) -> str:
-    """Adopt settings and rules and take in the drop; returns the hash of what is in force."""
+def prepare(state: State, now: datetime, lying: list[intake.Lying] | None = None) -> str:
+    """Adopt settings and rules and take in the drop; returns the hash of what is in force.
+
+    lying: what to take in; None: all that lies there.
+    """
     terms = adopt(state, now, hand())
-    take_in(state, now)
+    take_in(state, now, lying)
     return terms
 
 
@@ -100,7 +106,7 @@ def is_recent(state: State, terms: str, due: Due, now: datetime) -> bool:
 
 
 def tell_summary(state: State, terms: str, now: datetime) -> CheckedEvening | None:
-    """One notice for all evenings that were checked too late for notices of their own; returns the last of them."""
+    """One notice for all evenings that were checked too late for notices of their own; returns the newest of them."""
     index = state.index()
     (told,) = index.execute("SELECT COALESCE(MAX(after_seq), 0) FROM outbox WHERE topic = 'summary'").fetchone()
     untold = evenings.untold(index, told)
@@ -111,7 +117,7 @@ def tell_summary(state: State, terms: str, now: datetime) -> CheckedEvening | No
     with state.ledger.transaction(now) as transaction:
         for queued in outbox.queue(compose_summary(news), settings, state.archive, (news.seq, news.hash)):
             transaction.append(queued)
-    return untold[-1]
+    return latest_by_date(untold)[-1]
 
 
 def send(state: State, now: datetime) -> list[outbox.Result]:
@@ -120,14 +126,28 @@ def send(state: State, now: datetime) -> list[outbox.Result]:
     return outbox.drain(state.ledger, state.index(), state.archive, state.site.settings.notices, around, now)
 
 
-def finish(state: State, terms: str, last: Checked | None, now: datetime) -> None:
-    """After the last evening of a run: the summary of old ones, the pages of both, and the notices."""
+def finish(state: State, terms: str, last: Checked | None, now: datetime) -> list[outbox.Result]:
+    """After the last evening of a run: the summary of old ones, the pages, the witness, and the notices.
+
+    Pages or a heads file that cannot be written keep nobody from being told. Returns what became of the notices.
+    """
     summed_up = tell_summary(state, terms, now)
-    if summed_up is not None and (last is None or last.evening != summed_up):
-        draw_evening(state, summed_up, recall(state, summed_up).standings)
-    if last is not None:
-        draw_evening(state, last.evening, last.standings)
-    send(state, now)
+    try:
+        if summed_up is not None and (last is None or last.evening != summed_up):
+            draw_evening(state, summed_up, recall(state, summed_up).standings)
+        if last is not None:
+            draw_evening(state, last.evening, last.standings)
+        draw_missing(state)
+        state.witness(_heads(state))
+    finally:
+        sent = send(state, now)
+    return sent
+
+
+def _heads(state: State) -> list[Head]:
+    """The newest evenings, as their notices name them, and the newest entry."""
+    newest = evenings.all_editions(state.index())[-EVENINGS_WITNESSED:]
+    return [*(Head(own.seq, own.hash) for own in newest), state.ledger.head()]
 
 
 def worst(outcomes: Sequence[Outcome]) -> Outcome:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import sqlite3
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass
 from datetime import date
@@ -23,9 +23,11 @@ from monitor.ledger.chain import Ledger
 from monitor.ledger.disk import disk_errors
 from monitor.ledger.index import Index, Projection
 from monitor.ledger.links import Head
+from monitor.ledger.table import is_damage, sqlite_errors
 from monitor.limits.rules import read_rules
 from monitor.notices import outbox
 from monitor.site import Site, read_site
+from monitor.words import Damaged, DuskcheckError
 from monitor.world import Terms
 
 ADOPTED = "CREATE TABLE adopted (seq INTEGER PRIMARY KEY, rules TEXT NOT NULL, settings TEXT NOT NULL) STRICT"
@@ -90,11 +92,20 @@ class State:
         row = self.index().execute("SELECT rules, settings FROM adopted ORDER BY seq DESC LIMIT 1").fetchone()
         return (row[0], row[1]) if row else None
 
-    def witness(self, head: Head) -> None:
-        """Write the newest entry's number and hash to the heads file outside the state, where the site names one."""
-        if self.site.heads is not None:
-            with disk_errors(f"writing the heads file {self.site.heads}"), self.site.heads.open("a") as heads:
-                heads.write(f"{head.seq} {head.hash}\n")
+    def witness(self, heads: Iterable[Head]) -> None:
+        """Write numbers and hashes of entries to the heads file outside the state, where the site names one.
+
+        Those that stand there already are not written again.
+        """
+        path = self.site.heads
+        if path is None:
+            return
+        with disk_errors(f"writing the heads file {path}"), path.open("a+") as file:
+            file.seek(0)
+            written = file.read()
+            new = [line for line in (f"{head.seq} {head.hash}\n" for head in heads) if line not in written]
+            # A line that a full disk cut off stays by itself.
+            file.write(("\n" if written and not written.endswith("\n") else "") + "".join(new))
 
     def sources(self, day: date) -> Sources:
         """For building the world of a date: the sessions are those the installed package knows."""
@@ -118,13 +129,37 @@ class State:
 
 @contextmanager
 def open_state(site: Site, create: bool = False) -> Iterator[State]:
-    """Raises DuskcheckError when there is no ledger and `create` is not set."""
-    ledger = Ledger.open(site.state / "ledger.sqlite", create=create)
-    state = State(site, ledger)
+    """Raises DuskcheckError when there is no ledger and `create` is not set, Damaged when it alone is gone."""
+    path = site.state / "ledger.sqlite"
+    if create and not path.exists() and (site.state / "archive").exists():
+        raise Damaged(
+            f"{path} is missing, but the archive beside it is there. Go back to a backup; to begin a new record, move "
+            f"{site.state} away"
+        )
+    with Ledger.open(path, create=create) as ledger:
+        state = State(site, ledger)
+        try:
+            with _history_errors(state):
+                yield state
+        finally:
+            state.close()
+
+
+@contextmanager
+def _history_errors(state: State) -> Iterator[None]:
+    """What goes wrong with the cache of prices, in words; a broken one is thrown away, for it can be made again."""
     try:
-        yield state
-    finally:
-        state.close()
+        yield
+    except sqlite3.Error as error:  # the ledger and the index put theirs into words themselves
+        path = state.site.state / "history.sqlite"
+        if is_damage(error):
+            state.history.close()
+            path.unlink(missing_ok=True)
+            raise DuskcheckError(
+                f"{path} was broken and has been thrown away. It is a cache: run the command again, and it is made anew"
+            ) from error
+        with sqlite_errors(path, "using"):
+            raise
 
 
 def _read_terms(signed: Signed, archive: Archive) -> Terms:

@@ -106,7 +106,8 @@ class Window:
     """The sessions of one calendar up to the evening, with a close and a rate on each.
 
     sessions: (n + 1,) dates, ascending. close: (instruments, n + 1), carried over days without one.
-    rate: (currencies, n + 1). gap: (instruments, n + 1) no close although the instrument's own market was open.
+    rate: (currencies, n + 1), carried likewise. gap: (instruments, n + 1) no close although the instrument's own market
+    was open. rate_gap: (currencies, n + 1) no rate although the firm's calendar had a session.
     """
 
     calendar: str
@@ -114,6 +115,7 @@ class Window:
     close: Floats
     rate: Floats
     gap: Booleans
+    rate_gap: Booleans
 
 
 @dataclass(frozen=True)

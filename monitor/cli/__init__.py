@@ -4,23 +4,44 @@ from __future__ import annotations
 
 import os
 import sys
+from importlib import import_module
 
 import click
 
 import monitor
-from monitor.cli.check import check
-from monitor.cli.demo import demo
-from monitor.cli.excess import excess
-from monitor.cli.ledger import ledger
-from monitor.cli.report import report
-from monitor.cli.rules import rules
-from monitor.cli.serve import daemon
 from monitor.words import DuskcheckError, Exit
 
 TRACE = "DUSKCHECK_TRACE"
+# Each command lives in the module of its name and is loaded when it is called: loading all of them takes a second.
+COMMANDS = {
+    "check": "An evening now, or several in order.",
+    "daemon": "Evenings on schedule, until told to stop.",
+    "demo": "Set up the invented firm and run a year of its evenings.",
+    "excess": "The register of excesses.",
+    "ledger": "The record: verify it, show its entries.",
+    "report": "The pages of an evening again.",
+    "rules": "The limit rules: check them, show what they say.",
+}
 
 
-@click.group(context_settings={"help_option_names": ["-h", "--help"]})
+class Commands(click.Group):
+    """The commands by name, none of them loaded before it is called."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        return list(COMMANDS)
+
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
+        if cmd_name not in COMMANDS:
+            return None
+        command: click.Command = getattr(import_module(f"monitor.cli.{cmd_name}"), cmd_name)
+        return command
+
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        with formatter.section("Commands"):
+            formatter.write_dl(list(COMMANDS.items()))
+
+
+@click.group(cls=Commands, context_settings={"help_option_names": ["-h", "--help"]})
 @click.version_option(monitor.__version__, prog_name="duskcheck")
 def commands() -> None:
     """Check every evening whether any position, book or the whole firm is over its signed risk limits.
@@ -28,10 +49,6 @@ def commands() -> None:
     Exit codes: 0 every standing is within, near or waived; 1 the program failed; 2 the command, the site or the rules
     are wrong; 3 something is over its limit; 4 the evening could not be completed; 5 the record is damaged.
     """
-
-
-for command in (check, daemon, demo, excess, ledger, report, rules):
-    commands.add_command(command)
 
 
 def main() -> None:

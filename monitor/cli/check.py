@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import time
+from collections import Counter
 from collections.abc import Iterator, Sequence
-from datetime import UTC, date, datetime
+from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
+from zoneinfo import ZoneInfo
 
 import click
 from rich.console import Console
@@ -14,7 +17,11 @@ from monitor.cli.documents import evening_document
 from monitor.cli.options import Day, json_option, print_json, site_option
 from monitor.cli.screen import print_evening
 from monitor.daemon.schedule import newest_due
+from monitor.daemon.settings import Round
 from monitor.evening import Checked
+from monitor.feed import intake
+from monitor.notices import outbox
+from monitor.notices.figures import count
 from monitor.run import (
     Due,
     check_in_order,
@@ -29,6 +36,7 @@ from monitor.site import open_site
 from monitor.state import State
 from monitor.words import Exit, Outcome, WrongUse
 
+SETTLING_SECONDS = 1  # a file that stands still for so long is no longer being written
 EXITS = {Outcome.INCOMPLETE: Exit.INCOMPLETE, Outcome.OVER: Exit.OVER}
 
 
@@ -54,7 +62,7 @@ def check(
     site = open_site(site_file)
     now = datetime.now(UTC)
     with open_for_checking(site) as state:
-        terms = prepare(state, now)
+        terms = prepare(state, now, _settled(site.drop))
         due = _due(state, terms, (first or day, last or day), round_id, now)
         checked = None
         outcomes = []
@@ -62,9 +70,10 @@ def check(
             outcomes.append(checked.evening.outcome)
             if as_json:
                 print_json(evening_document(state, checked))
-        finish(state, terms, checked, now)
+        sent = finish(state, terms, checked, now)
         if checked is not None and not as_json:
             print_evening(state, checked, outcomes)
+        _say_what_waits(sent)
     return EXITS.get(worst(outcomes), Exit.DONE)
 
 
@@ -72,16 +81,52 @@ def _due(
     state: State, terms: str, span: tuple[date | None, date | None], round_id: str | None, now: datetime
 ) -> list[Due]:
     first, last = span
+    what = f"the round {round_id}" if round_id else "any book"
+    rounds = {each.id: each for each in state.site.settings.rounds if round_id in (None, each.id)}
+    if not rounds:
+        known = ", ".join(each.id for each in state.site.settings.rounds)
+        raise WrongUse(f"found the round {round_id!r}; expected one of {known}")
     if first is None or last is None:
-        rounds = [each for each in state.site.settings.rounds if round_id in (None, each.id)]
-        sessions = sessions_of(state, terms, now.date())
-        newest = newest_due(rounds, state.terms(terms), sessions, now)
+        sessions = sessions_of(state, terms, now.date() + timedelta(days=1))
+        newest = newest_due(list(rounds.values()), state.terms(terms), sessions, now)
+        if not newest:
+            raise WrongUse(f"found no session of the calendars of {what} lately; give the evening's --date")
         return [Due(day, name) for name, day in newest if day == max(day for _, day in newest)]
+    today = max(_today(each, now) for each in rounds.values())
+    if last > today:
+        raise WrongUse(f"found the date {last}, which is still to come; expected one up to today, {today}")
     found = evenings_between(state, terms, first, last, round_id)
-    if not found:
-        what = f"the round {round_id}" if round_id else "any book"
+    begun = [due for due in found if due.day <= _today(rounds[due.round], now)]
+    if not begun:
         raise WrongUse(f"{first} to {last}: no session of the calendars of {what}; expected at least one")
-    return found
+    return begun
+
+
+def _today(round_: Round, now: datetime) -> date:
+    """Which day it is where the round is checked."""
+    return now.astimezone(ZoneInfo(round_.time_zone)).date()
+
+
+def _settled(drop: Path) -> list[intake.Lying]:
+    """The files in the drop that nobody is writing any more; those still written wait for the next check."""
+    lying = intake.look(drop)
+    if all(file.changed < time.time_ns() - SETTLING_SECONDS * 10**9 for file in lying):
+        return lying
+    time.sleep(SETTLING_SECONDS)
+    again = set(intake.look(drop))
+    for file in lying:
+        if file not in again:
+            click.echo(f"duskcheck: {file.name} is still being written and was left for the next check", err=True)
+    return [file for file in lying if file in again]
+
+
+def _say_what_waits(sent: Sequence[outbox.Result]) -> None:
+    """What could not be told just now, one line a channel and reason."""
+    failed = Counter((own.notice.channel, own.said, own.final) for own in sent if not own.sent)
+    for (channel, reason, final), number in failed.items():
+        then = "given up" if final else "the next check or the daemon tries again"
+        what = count(number, "notice")
+        click.echo(f"duskcheck: {what} not taken by the channel {channel}: {reason}; {then}", err=True)
 
 
 def _in_order(checked: Iterator[Checked], due: Sequence[Due], as_json: bool) -> Iterator[Checked]:

@@ -41,7 +41,12 @@ def excess() -> None:
 @excess.command("list")
 @site_option
 @json_option
-@click.option("--state", "wanted", type=click.Choice([*ExcessState, "all"]), help="Open and waived when left out.")
+@click.option(
+    "--state",
+    "wanted",
+    type=click.Choice([*(state.value for state in ExcessState), "all"]),
+    help="Open and waived when left out.",
+)
 @click.option("--book", help="Excesses of one book only.")
 @click.option("--owner", help="Excesses of one owner only.")
 def list_excesses(site_file: Path, as_json: bool, wanted: str | None, book: str | None, owner: str | None) -> None:
@@ -66,7 +71,9 @@ def list_excesses(site_file: Path, as_json: bool, wanted: str | None, book: str 
     table = Table(box=None, pad_edge=False, padding=(0, 1, 0, 0))
     for heading in ("excess", "opened on"):
         table.add_column(heading, no_wrap=True)
-    for heading in ("state", "rule and subject", "last over at", "limit", "worst", "owner"):
+    table.add_column("state", min_width=len("2026-12-31"))
+    table.add_column("rule and subject", min_width=16, overflow="fold")
+    for heading in ("last over at", "limit", "owner"):
         table.add_column(heading, overflow="fold")
     for own in found:
         table.add_row(
@@ -75,12 +82,12 @@ def list_excesses(site_file: Path, as_json: bool, wanted: str | None, book: str 
             _state(own, days.get(own)),
             f"{own.rule} of {own.subject.name}",
             *last_over(own, None, rules),
-            worst_of(own, rules),
             own.owner or "",
         )
-    Console(highlight=False).print(table)
+    console = Console(highlight=False)
+    console.print(table)
     if days:
-        click.echo(f"Days are business days of the subject's calendar, counted to {aged_on}, the newest on record.")
+        console.print(f"Days are business days of the subject's calendar, counted to {aged_on}, the newest on record.")
 
 
 @excess.command("show")

@@ -20,7 +20,7 @@ SHOWN = 20
 
 def print_evening(state: State, checked: Checked, outcomes: Sequence[Outcome]) -> None:
     """The last evening of a run: its outcome in a sentence, what is not within, and where to look further."""
-    console = Console(highlight=False, soft_wrap=False)
+    console = Console(highlight=False, markup=False, emoji=False)  # names from files are not markup
     evening, standings = checked.evening, checked.standings
     recipe = evening.recipe
     rules = {rule.id: rule for rule in state.terms(recipe.rules).rules}
@@ -38,9 +38,9 @@ def print_evening(state: State, checked: Checked, outcomes: Sequence[Outcome]) -
     for cause in standings.lacking:
         console.print(f"lacking: {cause}")
     page = state.site.pages / page_name(recipe.date, recipe.round, evening.edition)
-    console.print(f"page: {page}")
+    console.print(f"page: {page}", soft_wrap=True)
     said = "recorded as" if checked.new else "nothing new since it was recorded as"
-    console.print(f"{said} entry {evening.seq}, hash {evening.hash}")
+    console.print(f"{said} entry {evening.seq}, hash {evening.hash}", soft_wrap=True)
 
 
 def _table(answers: Sequence[Answer]) -> Table:

@@ -16,7 +16,8 @@ from monitor.daemon.watch import Watch
 from monitor.facts import DaemonStarted, DaemonStopped, Fact
 from monitor.ledger.lock import lock
 from monitor.run import hand, open_for_checking
-from monitor.site import Site, open_site
+from monitor.site import open_site
+from monitor.state import State, open_state
 from monitor.words import Exit
 
 EVERY_SECONDS = 60
@@ -45,7 +46,10 @@ def serve(site_file: Path) -> int:
     with lock(site.state / "daemon.lock", what=f"the daemon of {site.settings.site}"):
         signal.signal(signal.SIGTERM, on_signal)
         signal.signal(signal.SIGINT, on_signal)
-        _record(site, DaemonStarted(f"duskcheck {monitor.__version__}", os.getpid(), hand()))
+        now = datetime.now(UTC)
+        with open_for_checking(site) as state:
+            adopt(state, now, hand())
+            _record(state, DaemonStarted(f"duskcheck {monitor.__version__}", os.getpid(), hand()), now)
         watch = Watch(site_file, site, stop.is_set)
         # One worker: a look never runs beside another. Late or doubled triggers come to one look.
         scheduler = BackgroundScheduler(
@@ -69,14 +73,13 @@ def serve(site_file: Path) -> int:
         stop.wait()
         LOG.info("stopping after the step in hand: %s", reasons[0])
         scheduler.shutdown(wait=True)
-        _record(site, DaemonStopped(reasons[0], os.getpid()))
+        # Not what was read at the start is in force now, and a check running beside is no reason to wait.
+        with open_state(watch.site) as state:
+            _record(state, DaemonStopped(reasons[0], os.getpid()), datetime.now(UTC))
         LOG.info("stopped")
     return Exit.DONE
 
 
-def _record(site: Site, fact: Fact) -> None:
-    now = datetime.now(UTC)
-    with open_for_checking(site) as state:
-        adopt(state, now, hand())
-        with state.ledger.transaction(now) as transaction:
-            transaction.append(fact)
+def _record(state: State, fact: Fact, now: datetime) -> None:
+    with state.ledger.transaction(now) as transaction:
+        transaction.append(fact)

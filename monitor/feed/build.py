@@ -46,7 +46,8 @@ def build(recipe: Recipe, sources: Sources) -> World:
     instruments = tuple(described.get(name) or Instrument(name, firm.base_currency) for name in names)
     unknown = np.array([name not in described for name in names], dtype=np.bool_)
     holdings = _renumbered(tonight, held, names)
-    own_calendars = _own_calendars(instruments, holdings, firm)
+    past = {name: _renumbered(own, before, names) for name, (before, own) in earlier.items()}
+    own_calendars = _own_calendars(instruments, (holdings, *past.values()), firm)
     calendars = main | {name: sources.sessions(name) for name in set(own_calendars)}
     spans = {name: _newest(main[name].up_to(recipe.window_to), terms.longest_window + 1) for name in main}
     grid = make_grid(
@@ -65,12 +66,14 @@ def build(recipe: Recipe, sources: Sources) -> World:
         scope=scope,
         holdings=holdings,
         market=market,
-        windows={name: cut_window(name, span, calendars, own_calendars, grid) for name, span in spans.items()},
+        windows={
+            name: cut_window(name, span, calendars, own_calendars, firm.calendar, grid) for name, span in spans.items()
+        },
         nav={book.id: latest_nav(book, recipe.date, terms.nav_age, known, history, main) for book in firm.books},
-        past=Past({name: _renumbered(own, before, names) for name, (before, own) in earlier.items()}),
+        past=Past(past),
         terms=terms,
         calendars=tuple(sorted(calendars)),
-        lacking=what_is_lacking(recipe.date, firm, scope, known, holdings, market, main),
+        lacking=what_is_lacking(recipe.date, terms, scope, known, holdings, market, main),
     )
 
 
@@ -107,13 +110,16 @@ def _renumbered(holdings: Holdings, own_names: Sequence[str], names: Sequence[st
     return replace(holdings, instrument=numbers[holdings.instrument])
 
 
-def _own_calendars(instruments: Sequence[Instrument], holdings: Holdings, firm: Firm) -> tuple[str, ...]:
-    """The calendar on which each instrument's closes are expected: its own, else that of the first book holding it."""
-    holder = dict(zip(holdings.instrument.tolist()[::-1], holdings.book.tolist()[::-1], strict=True))
-    return tuple(
-        instrument.calendar or (firm.books[holder[at]].calendar if at in holder else firm.calendar)
-        for at, instrument in enumerate(instruments)
-    )
+def _own_calendars(instruments: Sequence[Instrument], held: Sequence[Holdings], firm: Firm) -> tuple[str, ...]:
+    """The calendar on which each instrument's closes are expected: its own, else that of the first book holding it.
+
+    held: tonight's holdings, and then earlier ones, for what was sold since.
+    """
+    holder: dict[int, int] = {}
+    for holdings in held:
+        for at, book in zip(holdings.instrument.tolist(), holdings.book.tolist(), strict=True):
+            holder.setdefault(at, book)
+    return tuple(item.calendar or firm.books[holder[at]].calendar for at, item in enumerate(instruments))
 
 
 def _newest(days: Days, count: int) -> Days:

@@ -16,9 +16,11 @@ def digest_inputs(world: World) -> str:
     """The same digest means that a check again would say nothing new, whatever files came meanwhile.
 
     Only what the round answers for counts: its books' holdings and NAVs, the closes and rates that value them on every
-    session of the windows, what is signed, and what is lacking.
+    session of the windows, what is signed, and what is lacking; of the tags, those that a rule names.
     """
     recipe, firm = world.recipe, world.terms.firm
+    used = {item.tag for rule in world.terms.rules for item in rule.applies_to}
+    used |= {rule.each for rule in world.terms.rules if rule.each}
     digest = hashlib.sha256()
 
     def add(part: Any) -> None:
@@ -36,9 +38,8 @@ def digest_inputs(world: World) -> str:
 
     add([str(day) for day in (recipe.date, recipe.positions_on, recipe.prices_on, recipe.window_to)])
     add([recipe.round, recipe.rules, world.scope.completes, list(world.lacking)])
-    add(
-        [[i.id, i.currency, i.kind, i.multiplier, i.calendar, str(i.expiry), sorted(i.tags.items())] for i in described]
-    )
+    add([[i.id, i.currency, i.kind, i.multiplier, i.calendar, str(i.expiry)] for i in described])
+    add([[[tag, value] for tag, value in sorted(i.tags.items()) if tag in used] for i in described])
     add(world.market.unknown[instruments])
     for own in held:
         _add_holdings(own, books, world, add)
@@ -48,8 +49,11 @@ def digest_inputs(world: World) -> str:
         add(array[currencies])
     for name in calendars:
         window = world.windows[name]
-        for array in (window.sessions, window.close[instruments], window.rate[currencies], window.gap[instruments]):
-            add(array)
+        for array in (window.close, window.gap):
+            add(array[instruments])
+        for array in (window.rate, window.rate_gap):
+            add(array[currencies])
+        add(window.sessions)
     navs = [(firm.books[at].id, world.nav[firm.books[at].id]) for at in books]
     add([[book, nav.value, str(nav.on), nav.reason] for book, nav in navs])
     return digest.hexdigest()

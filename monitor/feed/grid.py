@@ -63,7 +63,12 @@ def make_grid(
 
 
 def cut_window(
-    calendar: str, sessions: Days, own: Mapping[str, Sessions], calendars: Sequence[str], grid: Grid
+    calendar: str,
+    sessions: Days,
+    own: Mapping[str, Sessions],
+    calendars: Sequence[str],
+    firm_calendar: str,
+    grid: Grid,
 ) -> Window:
     """The closes and rates on the sessions of one calendar. calendars: the name of each instrument's own."""
     ordinals = _ordinals(sessions)
@@ -72,7 +77,8 @@ def cut_window(
     opened = np.array([own_open[name] for name in calendars], dtype=np.bool_).reshape(len(calendars), len(sessions))
     given_today = grid.given[rows] & (grid.days[rows] == ordinals)[:, None]
     gap = opened & ~given_today.T & ~grid.cash[:, None]
-    return Window(calendar, sessions, grid.close[rows].T.copy(), grid.rate[rate_rows].T.copy(), gap)
+    rate_gap = own[firm_calendar].open_on_each(sessions) & (ordinals > grid.rate_day[rate_rows].T)
+    return Window(calendar, sessions, grid.close[rows].T.copy(), grid.rate[rate_rows].T.copy(), gap, rate_gap)
 
 
 def cut_market(

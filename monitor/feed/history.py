@@ -19,13 +19,14 @@ from monitor.facts import UsedFile
 from monitor.feed import calendars
 from monitor.feed.calendars import Sessions
 from monitor.feed.kinds import Panel, Parsed, Vocabulary, parse
-from monitor.words import DuskcheckError
+from monitor.words import DuskcheckError, FileKind
 from monitor.world import Floats, Integers
 
 FORMAT = 2
 TABLES = """
 CREATE TABLE names (id INTEGER PRIMARY KEY, joined TEXT UNIQUE NOT NULL) STRICT;
-CREATE TABLE panel (sha256 TEXT PRIMARY KEY, names INTEGER, days BLOB, closes BLOB, sum INTEGER) STRICT;
+CREATE TABLE panel (
+    sha256 TEXT, day TEXT, names INTEGER, days BLOB, closes BLOB, sum INTEGER, PRIMARY KEY (sha256, day)) STRICT;
 CREATE TABLE sessions (
     calendar TEXT, version TEXT, ends TEXT, days BLOB, sum INTEGER, PRIMARY KEY (calendar, version)) STRICT;
 CREATE TABLE seen (name TEXT PRIMARY KEY, size INTEGER, changed INTEGER, sha256 TEXT) STRICT, WITHOUT ROWID;
@@ -35,15 +36,18 @@ BROKEN = (sqlite3.SQLITE_CORRUPT, sqlite3.SQLITE_NOTADB, sqlite3.SQLITE_ERROR)
 
 
 class History:
-    """Reads blobs by hash through `read` when the cache does not hold them. A broken cache is begun anew."""
+    """Reads blobs by hash through `read` when the cache does not hold them. A broken cache is begun anew.
+
+    What a file says depends on its bytes and on the date in its name: two days may have the same prices.
+    """
 
     def __init__(self, path: Path, read: Callable[[str], bytes]) -> None:
         self._path = path
         self._read = read
         self._db: sqlite3.Connection | None = None
-        self._panels: dict[str, Panel] = {}
+        self._panels: dict[tuple[str, date | None], Panel] = {}
         self._lists: dict[str, tuple[str, ...]] = {}
-        self._parsed: dict[str, Parsed] = {}
+        self._parsed: dict[tuple[FileKind, str, date | None], Parsed] = {}
         self._sessions: dict[str, Sessions] = {}
         self._fetched: set[str] = set()
 
@@ -96,34 +100,38 @@ class History:
 
     def parsed(self, file: UsedFile) -> Parsed:
         """An accepted file that is not a panel, parsed."""
-        if file.sha256 not in self._parsed:
+        key = (file.file, file.sha256, file.day)
+        if key not in self._parsed:
             data = self._read(file.sha256)
-            self._parsed[file.sha256] = parse(file.file, file.file.value, data, file.day, Vocabulary())
-        return self._parsed[file.sha256]
+            self._parsed[key] = parse(file.file, file.file.value, data, file.day, Vocabulary())
+        return self._parsed[key]
 
-    def keep(self, sha256: str, panel: Panel) -> None:
-        """Store the panel of a file just accepted."""
+    def keep(self, sha256: str, day: date | None, panel: Panel) -> None:
+        """Store the panel of a file just accepted. day: the date in its name."""
+        on = str(day or "")
         joined = "\n".join(panel.names)
         days = np.array(panel.days, dtype="<i8").tobytes()
         closes = panel.values.astype("<f8").tobytes()
         self._rows("INSERT OR IGNORE INTO names (joined) VALUES (?)", (joined,))
         self._rows(
-            "INSERT OR REPLACE INTO panel SELECT ?, id, ?, ?, ? FROM names WHERE joined = ?",
-            (sha256, days, closes, _sum(sha256, joined, days, closes), joined),
+            "INSERT OR REPLACE INTO panel SELECT ?, ?, id, ?, ?, ? FROM names WHERE joined = ?",
+            (sha256, on, days, closes, _sum(sha256, on, joined, days, closes), joined),
         )
 
     def panel(self, file: UsedFile) -> Panel:
         """The values of an accepted file of prices or rates."""
-        if file.sha256 not in self._panels:
-            self._panels[file.sha256] = self._stored_panel(file.sha256) or self._parse_panel(file)
-        return self._panels[file.sha256]
+        key = (file.sha256, file.day)
+        if key not in self._panels:
+            self._panels[key] = self._stored_panel(file.sha256, str(file.day or "")) or self._parse_panel(file)
+        return self._panels[key]
 
-    def _stored_panel(self, sha256: str) -> Panel | None:
+    def _stored_panel(self, sha256: str, on: str) -> Panel | None:
         for joined, days, closes, total in self._rows(
-            "SELECT joined, days, closes, sum FROM panel JOIN names ON names.id = panel.names WHERE sha256 = ?",
-            (sha256,),
+            "SELECT joined, days, closes, sum FROM panel JOIN names ON names.id = panel.names"
+            " WHERE sha256 = ? AND day = ?",
+            (sha256, on),
         ):
-            if _sum(sha256, joined, days, closes) == total:
+            if _sum(sha256, on, joined, days, closes) == total:
                 return self._unpacked(joined, np.frombuffer(days, dtype="<i8"), np.frombuffer(closes, dtype="<f8"))
         return None
 
@@ -137,7 +145,7 @@ class History:
         content = self.parsed(file).content
         if not isinstance(content, Panel):
             raise TypeError(f"{file.file} is not a file of prices or rates")
-        self.keep(file.sha256, content)
+        self.keep(file.sha256, file.day, content)
         return content
 
     def matrix(self, files: Sequence[UsedFile], first: date, last: date) -> tuple[Integers, tuple[str, ...], Floats]:

@@ -91,7 +91,7 @@ def take(
 def remember(taken: Taken, history: History) -> None:
     """Keep in the cache what a recorded file holds and that it was seen."""
     if taken.panel is not None and taken.fact.sha256 is not None:
-        history.keep(taken.fact.sha256, taken.panel)
+        history.keep(taken.fact.sha256, taken.fact.day, taken.panel)
     if taken.fact.sha256 is not None:
         history.remember_seen(taken.lying.name, taken.lying.size, taken.lying.changed, taken.fact.sha256)
 

@@ -8,7 +8,7 @@ from datetime import date
 
 import numpy as np
 
-from monitor.feed.tables import Table, read_table
+from monitor.feed.tables import TOO_LARGE, Table, read_table
 from monitor.reading.values import shown
 from monitor.words import FileKind, Finding, InstrumentKind, did_you_mean
 from monitor.world import Floats, Instrument
@@ -138,7 +138,7 @@ def _pairs(table: Table, words: Vocabulary) -> tuple[list[str], list[float]]:
         if not (words.has_currency(pair[:3]) and words.has_currency(pair[3:])) or pair[:3] == pair[3:]:
             expected = "two ISO 4217 codes, as EURUSD: what one EUR costs in USD"
             table.wrong(at, "pair", f"{shown(pair)} as pair", expected)
-        if rate <= 0:
+        if rate <= 1 / TOO_LARGE:
             table.wrong(at, "rate", f"the rate {rate:g}", "a rate above zero")
     return pairs, rates
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping, Sequence, Set
 from datetime import date
 
 import numpy as np
@@ -10,14 +10,14 @@ import numpy as np
 from monitor.feed.calendars import Sessions
 from monitor.feed.known import Known
 from monitor.words import FileKind
-from monitor.world import Firm, Holdings, Integers, Market, Scope
+from monitor.world import Firm, Holdings, Integers, Market, Rule, Scope, Terms
 
 NAMED = 5  # how many names a sentence lists before it only counts
 
 
 def what_is_lacking(
     day: date,
-    firm: Firm,
+    terms: Terms,
     scope: Scope,
     known: Known,
     holdings: Holdings,
@@ -25,15 +25,24 @@ def what_is_lacking(
     calendars: Mapping[str, Sessions],
 ) -> tuple[str, ...]:
     """Refused files, missing books, held instruments without a close, currencies without a rate: of this round."""
+    firm = terms.firm
     answered = [at for at, book in enumerate(firm.books) if scope.completes or scope.holds(book.id)]
-    held = np.unique(holdings.instrument[np.isin(holdings.book, answered)])
+    own = np.isin(holdings.book, answered)
+    held = np.unique(holdings.instrument[own])
     books = {firm.books[at].id for at in answered}
+    money = {market.instruments[at].currency for at in held}
+    money |= {firm.books[at].currency for at in np.unique(holdings.book[own])}
+    money |= {rule.currency for rule in terms.rules if rule.currency and _in_force(rule, day)}
     return (
         *known.refusals(day),
         *(reason for book, reason in holdings.missing.items() if book in books),
         *_prices(day, known, held, market),
-        *_rates(day, firm, held, market, calendars),
+        *_rates(day, firm, money, market, calendars),
     )
+
+
+def _in_force(rule: Rule, day: date) -> bool:
+    return (rule.in_force_from or day) <= day <= (rule.in_force_to or day)
 
 
 def _prices(day: date, known: Known, held: Integers, market: Market) -> list[str]:
@@ -49,9 +58,8 @@ def _prices(day: date, known: Known, held: Integers, market: Market) -> list[str
     return told
 
 
-def _rates(day: date, firm: Firm, held: Integers, market: Market, calendars: Mapping[str, Sessions]) -> list[str]:
+def _rates(day: date, firm: Firm, needed: Set[str], market: Market, calendars: Mapping[str, Sessions]) -> list[str]:
     place = market.currency_index()
-    needed = {market.instruments[at].currency for at in held}
     told = []
     absent = sorted(code for code in needed if np.isnan(market.rate[place[code]]))
     if absent:

@@ -17,6 +17,7 @@ from monitor.words import Finding, did_you_mean
 NUMBER = re.compile(r"[+-]?(\d+(\.\d*)?|\.\d+)([eE][+-]?\d+)?", re.ASCII)
 DAY = re.compile(r"\d{4}-\d{2}-\d{2}", re.ASCII)
 MOST_FINDINGS = 20
+TOO_LARGE = 1e18  # beyond any quantity, price or NAV: what is refused here cannot overflow later
 SURELY_MEANT = 0.85  # a column this near to a known one is a slip, and not a tag of the site's own
 
 
@@ -46,15 +47,16 @@ class Table:
         return texts
 
     def numbers(self, column: str, empty: float | None = None) -> list[float]:
-        """Finite numbers with a decimal point. A blank cell gives `empty`, or is a finding when that is None."""
+        """Numbers with a decimal point. A blank cell gives `empty`, or is a finding when that is None."""
         numbers = []
         for at, text in enumerate(self.texts(column)):
             if not text and empty is not None:
                 numbers.append(empty)
                 continue
             number = float(text) if NUMBER.fullmatch(text) else math.nan
-            if not math.isfinite(number):
-                self.wrong(at, column, f"{shown(text)} as {column}", "a finite number with a decimal point")
+            if not abs(number) < TOO_LARGE:
+                expected = f"a number with a decimal point, below {TOO_LARGE:.0e} in size"
+                self.wrong(at, column, f"{shown(text)} as {column}", expected)
             numbers.append(number)
         return numbers
 

@@ -8,7 +8,7 @@ import numpy as np
 
 from monitor.limits.measures import MEASURES, Measured, Parameters
 from monitor.limits.slices import Slice
-from monitor.limits.subjects import FIRM, Members, book_subject, members_of, position_subject
+from monitor.limits.subjects import Members, book_subject, members_of, position_subject, selected_books
 from monitor.limits.valuation import Valuation
 from monitor.words import Subject, Unit
 from monitor.world import Book, BookFigures, MeasureCall, Rule, Selector, Terms, Unmeasured, World
@@ -22,11 +22,12 @@ def figures_of_books(valuation: Valuation) -> Iterator[BookFigures]:
         tail = world.terms.default_tail
         measured = {name: _ask(part, name, {}) for name in ("gross", "net", "day_loss")}
         measured |= {name: _ask(part, name, tail.parameters) for name in ("value_at_risk", "expected_shortfall")}
-        nav, nav_reason = part.denominator("nav")
+        nav = part.denominator("nav")
         book_nav = world.nav.get(subject.book) if subject.book else None
         missing = [reason for book, reason in world.holdings.missing.items() if subject.book in (None, book)]
-        values = {name: None if missing else _value(own) for name, own in measured.items()}
-        reasons = [*missing[:1], *(own.reasons[0] for own in measured.values()), nav_reason[0]]
+        figures = {name: own.figure(0) for name, own in measured.items()}
+        values = {name: None if missing else value for name, (value, _) in figures.items()}
+        reasons = [*missing[:1], *(reason for _, reason in figures.values()), nav.reasons[0]]
         sessions = measured["value_at_risk"].n
         loss = values["day_loss"]
         yield BookFigures(
@@ -35,7 +36,7 @@ def figures_of_books(valuation: Valuation) -> Iterator[BookFigures]:
             positions=len(part.members.position),
             gross=values["gross"],
             net=values["net"],
-            nav=None if nav_reason[0] else float(nav[0]),
+            nav=None if nav.reasons[0] else float(nav.value[0]),
             nav_on=book_nav.on if book_nav else None,
             value_at_risk=values["value_at_risk"],
             expected_shortfall=values["expected_shortfall"],
@@ -62,17 +63,21 @@ def find_unmeasured(valuation: Valuation) -> Iterator[Unmeasured]:
             yield Unmeasured(_position(world, book, at), reason)
 
 
-def find_uncovered(world: World, asked: Sequence[Members]) -> Iterator[Subject]:
-    """The books of this round that no rule in force asks about, and of the other books such positions."""
+def find_uncovered(world: World, asked: Sequence[tuple[Rule, Members]]) -> Iterator[Subject]:
+    """The books of this round that no rule in force asks about, and of the other books such positions.
+
+    A book without positions is asked about by every rule that does not leave it out.
+    """
     covered = np.zeros(len(world.holdings.quantity), dtype=np.bool_)
-    asked_keys = {subject.key for members in asked for subject in members.subjects}
-    for members in asked:
+    reached = set()
+    for rule, members in asked:
         covered[members.position] = True
+        reached |= {book.id for book in selected_books(world, rule.applies_to)}
     for number, book in enumerate(world.terms.firm.books):
         own = world.holdings.book == number
         if not world.scope.holds(book.id):
             continue
-        if not (covered & own).any() and not asked_keys & {FIRM.key, book_subject(book.id).key}:
+        if not (covered & own).any() and (own.any() or book.id not in reached):
             yield book_subject(book.id)
         else:
             yield from (_position(world, book.id, at) for at in np.flatnonzero(own & ~covered).tolist())
@@ -125,7 +130,3 @@ def _unwritten_rule(terms: Terms, book: Book | None) -> Rule:
 
 def _ask(part: Slice, name: str, parameters: Parameters) -> Measured:
     return MEASURES[name](part, parameters, Unit.AMOUNT)
-
-
-def _value(measured: Measured) -> float | None:
-    return None if measured.reasons[0] else float(measured.value[0])

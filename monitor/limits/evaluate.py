@@ -6,14 +6,16 @@ from collections.abc import Collection, Iterator
 
 from monitor.limits.coverage import figures_of_books, find_uncovered, find_unmeasured
 from monitor.limits.measures import MEASURES, Measured, divide
-from monitor.limits.slices import Slice
-from monitor.limits.subjects import Members, members_of, selected_books
+from monitor.limits.slices import Slice, shortened
+from monitor.limits.subjects import Members, books_under, members_of, with_past
 from monitor.limits.valuation import Valuation
 from monitor.words import Mark, Side, Standing, Subject, Unit
 from monitor.world import Answer, Rule, Standings, World
 
 BEYOND_ROUNDING = 1e-12  # how far past its level, as a share of it, a figure must lie to count as past it
 DENOMINATORS = {Unit.OF_NAV: "nav", Unit.OF_GROSS: "gross"}
+SEVERITY = (Standing.WITHIN, Standing.NEAR, Standing.OVER)
+OF_WHAT_WAS_HELD = ("day_loss",)  # measures whose subjects may hold nothing any more
 
 
 def evaluate(world: World, questions: Collection[str] | None = None) -> Standings:
@@ -22,13 +24,13 @@ def evaluate(world: World, questions: Collection[str] | None = None) -> Standing
     rules = [
         rule for rule in world.terms.rules if in_force(rule, world) and (questions is None or rule.id in questions)
     ]
-    asked = [(rule, members_of(rule, world)) for rule in rules]
+    asked = [(rule, _subjects(rule, world)) for rule in rules]
     answers = [answer for rule, members in asked for answer in _answers(rule, members, valuation)]
     return Standings(
         answers=tuple(answers),
         books=tuple(figures_of_books(valuation)) if questions is None else (),
         unmeasured=tuple(find_unmeasured(valuation)) if questions is None else (),
-        uncovered=tuple(find_uncovered(world, [members for _, members in asked])) if questions is None else (),
+        uncovered=tuple(find_uncovered(world, asked)) if questions is None else (),
         lacking=world.lacking,
     )
 
@@ -38,13 +40,20 @@ def in_force(rule: Rule, world: World) -> bool:
     return (rule.in_force_from or day) <= day <= (rule.in_force_to or day)
 
 
+def _subjects(rule: Rule, world: World) -> Members:
+    members = members_of(rule, world)
+    return with_past(rule, world, members) if rule.measure.name in OF_WHAT_WAS_HELD else members
+
+
 def _answers(rule: Rule, members: Members, valuation: Valuation) -> Iterator[Answer]:
     """In the order of the subjects, those of this round only."""
-    world = valuation.world
+    world, firm = valuation.world, valuation.world.terms.firm
+    of_book = {book.id: (rule.currency or book.currency, book.calendar) for book in firm.books}
+    of_firm = (rule.currency or firm.base_currency, firm.calendar)
     slices: dict[tuple[str, str], list[int]] = {}
     for at, subject in enumerate(members.subjects):
         if world.scope.holds(subject.book):
-            slices.setdefault(_currency_and_calendar(rule, subject, world), []).append(at)
+            slices.setdefault(of_book[subject.book] if subject.book else of_firm, []).append(at)
     found: dict[int, Answer] = {}
     for (currency, calendar), places in slices.items():
         part = Slice(valuation, rule, members.only(places), currency, calendar)
@@ -52,18 +61,11 @@ def _answers(rule: Rule, members: Members, valuation: Valuation) -> Iterator[Ans
     return iter([found[at] for at in sorted(found)])
 
 
-def _currency_and_calendar(rule: Rule, subject: Subject, world: World) -> tuple[str, str]:
-    firm = world.terms.firm
-    book = next((book for book in firm.books if book.id == subject.book), None)
-    currency = book.currency if book else firm.base_currency
-    return rule.currency or currency, book.calendar if book else firm.calendar
-
-
 def _standings(rule: Rule, part: Slice) -> list[Answer]:
     measured = MEASURES[rule.measure.name](part, rule.measure.parameters, rule.unit)
     amount = measured.amount
     if rule.unit in DENOMINATORS:
-        measured = divide(measured, *part.denominator(DENOMINATORS[rule.unit]))
+        measured = divide(measured, part.denominator(DENOMINATORS[rule.unit]))
         amount = False
     marks = part.marks(measured.how.window)
     return [
@@ -75,15 +77,16 @@ def _standings(rule: Rule, part: Slice) -> list[Answer]:
 def _answer(
     rule: Rule, part: Slice, at: int, subject: Subject, measured: Measured, amount: bool, marks: list[Mark]
 ) -> Answer:
-    reason = _missing_book(rule, subject, part.world) or measured.reasons[at]
-    value = None if reason else float(measured.value[at])
-    side, distance = _distance(rule, value)
-    own = [measured.marks[at]] if at in measured.marks else []
+    value, reason = measured.figure(at)
+    missing = _missing_book(rule, subject, part.world)
+    if missing:
+        value, reason = None, missing
+    standing, side, distance = _held(rule, value)
     return Answer(
         rule=rule.id,
         subject=subject,
         measure=rule.measure.name,
-        standing=_standing(rule, value, side, distance),
+        standing=standing,
         value=value,
         unit=rule.unit,
         currency=part.currency if amount else None,
@@ -97,7 +100,7 @@ def _answer(
         high=None,
         n=int(measured.n[at]) if measured.n is not None else None,
         reason=reason,
-        marks=(*marks, *own),
+        marks=tuple(shortened([*marks, *measured.marks[at]]) if at in measured.marks else marks),
         how=measured.how,
     )
 
@@ -105,32 +108,33 @@ def _answer(
 def _missing_book(rule: Rule, subject: Subject, world: World) -> str | None:
     """Why a subject that lies in, or reaches over, a book without positions cannot be measured."""
     missing = world.holdings.missing
-    books = [subject.book] if subject.book else [book.id for book in selected_books(world, rule.applies_to)]
-    return next((missing[book] for book in books if book in missing), None)
+    return (
+        next((missing[book] for book in books_under(rule, subject, world) if book in missing), None)
+        if missing
+        else None
+    )
 
 
-def _distance(rule: Rule, value: float | None) -> tuple[Side, float | None]:
-    """The side that the value is furthest past, or nearest to, and how far: positive is past the limit."""
+def _held(rule: Rule, value: float | None) -> tuple[Standing, Side, float | None]:
+    """The standing, on the side where it is worst or else nearest to its limit, and how far past: positive is over."""
     if value is None:
-        return (Side.ABOVE if rule.limit is not None else Side.BELOW), None
+        return Standing.UNMEASURED, Side.ABOVE if rule.limit is not None else Side.BELOW, None
     sides = []
     if rule.limit is not None:
-        sides.append((value - rule.limit, Side.ABOVE))
+        near = rule.near is not None and value >= rule.near
+        sides.append((_standing(value - rule.limit, rule.limit, near), Side.ABOVE, value - rule.limit))
     if rule.limit_below is not None:
-        sides.append((rule.limit_below - value, Side.BELOW))
-    distance, side = max(sides, key=lambda found: found[0])
-    return side, distance
+        near = rule.near_below is not None and value <= rule.near_below
+        sides.append(
+            (_standing(rule.limit_below - value, rule.limit_below, near), Side.BELOW, rule.limit_below - value)
+        )
+    return max(sides, key=lambda found: (SEVERITY.index(found[0]), found[2]))
 
 
-def _standing(rule: Rule, value: float | None, side: Side, distance: float | None) -> Standing:
-    if value is None or distance is None:
-        return Standing.UNMEASURED
-    level = rule.limit if side is Side.ABOVE else rule.limit_below
-    if distance > BEYOND_ROUNDING * abs(level or 0.0):
+def _standing(distance: float, limit: float, near: bool) -> Standing:
+    if distance > BEYOND_ROUNDING * abs(limit):
         return Standing.OVER
-    if (rule.near is not None and value >= rule.near) or (rule.near_below is not None and value <= rule.near_below):
-        return Standing.NEAR
-    return Standing.WITHIN
+    return Standing.NEAR if near else Standing.WITHIN
 
 
 def _utilisation(rule: Rule, value: float | None, side: Side) -> float | None:

@@ -6,15 +6,16 @@ To add one: write the function, enter it in MEASURES, describe it in catalogue.p
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+import math
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
 
-from monitor.limits.slices import Slice
-from monitor.limits.subjects import members_of
-from monitor.risk.figures import LACK_TEXT, Figures, Lack
+from monitor.limits.slices import Denominator, Slice, stray_marks
+from monitor.limits.subjects import Members, books_under, members_of
+from monitor.risk.figures import LACK_TEXT, Codes, Figures, Lack
 from monitor.risk.historical import historical
 from monitor.risk.normal import normal
 from monitor.risk.probability import loss_probability as probability_of_loss
@@ -22,16 +23,17 @@ from monitor.risk.student import student_t
 from monitor.risk.tail import FIT_NOTE_TEXT, FitNote, Tail
 from monitor.risk.volatility import annualised, ewma, sample
 from monitor.words import Mark, MarkKind, Unit
-from monitor.world import Floats, How, Integers
+from monitor.world import Booleans, Floats, How, Integers
 
 Parameters = Mapping[str, Any]
+WORST_FOR_MEAN = "less than one scenario lies in the tail: the worst one stands in for the mean"
 
 
 @dataclass
 class Measured:
     """A measure's answer. value: (subjects,), NaN exactly where `reasons` says why. amount: in the slice's currency.
 
-    n: (subjects,) sessions used, or None for measures of tonight alone. marks: doubts of the method, by subject.
+    n: (subjects,) sessions used, or None for measures of tonight alone. marks: doubts of the measure's own, by subject.
     """
 
     value: Floats
@@ -39,12 +41,22 @@ class Measured:
     amount: bool
     n: Integers | None = None
     how: How = field(default_factory=How)
-    marks: dict[int, Mark] = field(default_factory=dict)
+    marks: dict[int, list[Mark]] = field(default_factory=dict)
 
     def leave_out(self, at: int, reason: str) -> None:
         """Take the figure of one subject back and say why."""
         self.value[at] = np.nan
         self.reasons[at] = reason
+
+    def mark(self, at: int, marks: Iterable[Mark]) -> None:
+        self.marks.setdefault(at, []).extend(marks)
+
+    def figure(self, at: int) -> tuple[float | None, str | None]:
+        """The figure of one subject, or the reason why there is none."""
+        value, reason = float(self.value[at]), self.reasons[at]
+        if reason is None and not math.isfinite(value):
+            reason = "the figure is too large to calculate with"
+        return (value, None) if reason is None else (None, reason)
 
 
 Measure = Callable[[Slice, Parameters, Unit], Measured]
@@ -83,7 +95,7 @@ def leverage(part: Slice, _parameters: Parameters, _unit: Unit) -> Measured:
     """
     measured = _of_exposures(part, np.where(part.own_cash, 0.0, np.abs(part.exposure)))
     measured.amount = False
-    return divide(measured, *part.denominator("nav"))
+    return divide(measured, part.denominator("nav"))
 
 
 def weight(part: Slice, _parameters: Parameters, _unit: Unit) -> Measured:
@@ -115,7 +127,7 @@ def value_at_risk(part: Slice, parameters: Parameters, _unit: Unit) -> Measured:
 
 def expected_shortfall(part: Slice, parameters: Parameters, _unit: Unit) -> Measured:
     """The mean loss in the worst share 1 - confidence of outcomes. Amount, positive when a loss."""
-    return _of_tail(part, parameters, lambda tail: tail.expected_shortfall)
+    return _of_tail(part, parameters, lambda tail: tail.expected_shortfall, WORST_FOR_MEAN)
 
 
 def volatility(part: Slice, parameters: Parameters, unit: Unit) -> Measured:
@@ -126,9 +138,9 @@ def volatility(part: Slice, parameters: Parameters, unit: Unit) -> Measured:
     """
     by_instrument = unit is Unit.RATIO
 
-    def figures(rows: Floats, _subjects: Integers) -> tuple[Figures, None]:
+    def figures(rows: Floats, _subjects: Integers) -> tuple[Figures, dict[int, str]]:
         made = sample(rows) if parameters["method"] == "sample" else ewma(rows, float(parameters["decay"]))
-        return annualised(made, part.world.terms.days_a_year), None
+        return annualised(made, part.world.terms.days_a_year), {}
 
     how = How(method=parameters["method"], window=parameters["window"])
     return _over_window(part, parameters["window"], figures, how, amount=not by_instrument, of_returns=by_instrument)
@@ -140,27 +152,25 @@ def loss_probability(part: Slice, parameters: Parameters, _unit: Unit) -> Measur
     The threshold is an amount in the slice's currency, or a share of the denominator that `of` names.
     """
     threshold = np.full(part.size, float(parameters["threshold"]))
-    lacking: list[str | None] = [None] * part.size
-    if parameters.get("of"):
-        denominator, lacking = part.denominator(parameters["of"])
-        threshold = np.nan_to_num(threshold * denominator)
+    share_of = part.denominator(parameters["of"]) if parameters["of"] else None
+    if share_of is not None:
+        threshold = np.nan_to_num(threshold * share_of.value)
 
-    def figures(rows: Floats, subjects: Integers) -> tuple[Figures, Integers]:
+    def figures(rows: Floats, subjects: Integers) -> tuple[Figures, dict[int, str]]:
         made = probability_of_loss(
             rows, threshold[subjects], parameters["horizon_days"], parameters["method"], parameters["drift"]
         )
-        return made, made.note.astype(np.int64)
+        return made, _fit_notes(made.note)
 
     how = How(
         method=parameters["method"],
         horizon_days=parameters["horizon_days"],
         window=parameters["window"],
-        of=parameters.get("of"),
+        of=parameters["of"],
     )
     measured = _over_window(part, parameters["window"], figures, how, amount=False)
-    for at, reason in enumerate(lacking):
-        if reason is not None:
-            measured.leave_out(at, reason)
+    if share_of is not None:
+        _rest_on(measured, share_of)
     return measured
 
 
@@ -169,32 +179,48 @@ def day_loss(part: Slice, _parameters: Parameters, _unit: Unit) -> Measured:
 
     The hypothetical P&L of the design: no trades of the day, no fees. Zero on an evening that is no session.
     """
-    held, pnl, _ = part.valuation.last_session(part.calendar, part.currency)
-    earlier = members_of(part.rule, replace(part.world, holdings=held))
+    world, last = part.world, part.last_session()
+    held = last.holdings
+    earlier = members_of(part.rule, replace(world, holdings=held))
+    names = [world.market.instruments[at].id for at in held.instrument.tolist()]
     place = {subject.key: at for at, subject in enumerate(earlier.subjects)}
-    totals = earlier.sum(np.nan_to_num(pnl))
-    broken = earlier.sum(np.isnan(pnl).astype(np.float64)) > 0
+    totals = earlier.sum(np.nan_to_num(last.pnl))
+    broken = dict(_pairs(earlier, np.isnan(last.pnl)))
     measured = Measured(np.zeros(part.size), [None] * part.size, amount=True, how=How(method="hypothetical"))
+    marks: dict[int, list[Mark]] = {}
+    for owner, position in _pairs(earlier, last.carried):
+        marks.setdefault(owner, []).append(Mark(MarkKind.CARRIED, f"{names[position]} on an older price or FX rate"))
+    stray = stray_marks(names[at] for at in earlier.stray.tolist())
     for at, subject in enumerate(part.members.subjects):
-        missing = [reason for book, reason in held.missing.items() if subject.book in (None, book)]
-        own = place.get(subject.key)
+        missing = [held.missing[book] for book in books_under(part.rule, subject, world) if book in held.missing]
+        own = place.get(subject.key, -1)
+        measured.mark(at, [*marks.get(own, []), *stray])
         if missing:
             measured.leave_out(at, missing[0])
-        elif own is not None and broken[own]:
-            measured.leave_out(at, f"a position held on {held.on} has no close to compare with")
-        elif own is not None:
+        elif own in broken:
+            measured.leave_out(
+                at, f"{names[broken[own]]}, held on {held.on}, has no P&L: no description, price or rate"
+            )
+        elif own >= 0:
             measured.value[at] = 0.0 - totals[own]
     return measured
 
 
-def divide(measured: Measured, denominator: Floats, reasons: list[str | None]) -> Measured:
+def divide(measured: Measured, denominator: Denominator) -> Measured:
     """Turn amounts into shares of a denominator; a subject without one has no figure."""
     with np.errstate(all="ignore"):
-        measured.value = measured.value / denominator
-    for at, reason in enumerate(reasons):
+        measured.value = measured.value / denominator.value
+    _rest_on(measured, denominator)
+    return measured
+
+
+def _rest_on(measured: Measured, denominator: Denominator) -> None:
+    """What is lacking or doubtful in the denominator is so in the figure."""
+    for at, (reason, doubts) in enumerate(zip(denominator.reasons, denominator.doubts, strict=True)):
         if reason is not None and measured.reasons[at] is None:
             measured.leave_out(at, reason)
-    return measured
+        if doubts:
+            measured.mark(at, doubts)
 
 
 def _of_exposures(part: Slice, values: Floats) -> Measured:
@@ -204,17 +230,22 @@ def _of_exposures(part: Slice, values: Floats) -> Measured:
     return measured
 
 
-def _of_tail(part: Slice, parameters: Parameters, chosen: Callable[[Tail], Figures]) -> Measured:
+def _of_tail(
+    part: Slice, parameters: Parameters, chosen: Callable[[Tail], Figures], inexact: str | None = None
+) -> Measured:
+    """inexact: what to say where less than one scenario lies in the tail."""
     confidence, horizon, method = parameters["confidence"], parameters["horizon_days"], parameters["method"]
 
-    def figures(rows: Floats, _subjects: Integers) -> tuple[Figures, Integers]:
+    def figures(rows: Floats, _subjects: Integers) -> tuple[Figures, dict[int, str]]:
         if method == "historical":
             tail = historical(rows, confidence, horizon)
         elif method == "normal":
             tail = normal(rows, confidence, horizon, parameters["drift"])
         else:
             tail = student_t(rows, confidence, horizon, parameters["drift"])
-        return chosen(tail), tail.note.astype(np.int64)
+        if inexact and not tail.exact_tail:
+            return chosen(tail), dict.fromkeys(range(len(rows)), inexact)
+        return chosen(tail), _fit_notes(tail.note)
 
     how = How(method=method, confidence=confidence, horizon_days=horizon, window=parameters["window"])
     return _over_window(part, parameters["window"], figures, how, amount=True)
@@ -223,48 +254,56 @@ def _of_tail(part: Slice, parameters: Parameters, chosen: Callable[[Tail], Figur
 def _over_window(
     part: Slice,
     window: int,
-    figures: Callable[[Floats, Integers], tuple[Figures, Integers | None]],
+    figures: Callable[[Floats, Integers], tuple[Figures, dict[int, str]]],
     how: How,
     amount: bool,
     of_returns: bool = False,
 ) -> Measured:
     """Ask a function of the risk room for all subjects at once, those with a shorter history apart.
 
-    figures: rows (k, n) of k subjects, and their places in the slice, to a figure a row and a note on the fit.
+    figures: rows (k, n) of k subjects, and their places in the slice, to a figure a row and, by row, a note on it.
     """
     made = part.scenarios(window)
-    rows = part.members.sum(np.nan_to_num(made.log_returns) if of_returns else made.pnl)
+    rows = part.members.sum(made.log_returns() if of_returns else made.pnl)
     used = part.sessions_used(window)
     measured = Measured(np.full(part.size, np.nan), [None] * part.size, amount, used, how)
     for n in np.unique(used):
         subjects = np.flatnonzero(used == n)
         figure, notes = figures(rows[subjects, rows.shape[1] - n :], subjects)
         measured.value[subjects] = figure.value
-        for at, lack in zip(subjects.tolist(), figure.lack.tolist(), strict=True):
-            if lack != Lack.NONE:
-                measured.reasons[at] = LACK_TEXT[Lack(lack)]
-        if notes is not None:
-            for at in np.flatnonzero(notes != FitNote.AS_ASKED).tolist():
-                measured.marks[int(subjects[at])] = Mark(MarkKind.METHOD, FIT_NOTE_TEXT[FitNote(notes[at])])
+        for row in np.flatnonzero(figure.lack != Lack.NONE).tolist():
+            measured.reasons[int(subjects[row])] = LACK_TEXT[Lack(figure.lack[row])]
+        for row, text in notes.items():
+            measured.mark(int(subjects[row]), [Mark(MarkKind.METHOD, text)])
         if n < window:
             for at in subjects.tolist():
-                measured.marks.setdefault(at, Mark(MarkKind.SHORT, f"{n} of the {window} sessions of the window"))
+                measured.mark(at, [Mark(MarkKind.SHORT, f"{n} of the {window} sessions of the window")])
     _leave_out_troubled(part, measured, part.exposure_troubles() | part.window_troubles(window, used))
     return measured
 
 
 def _leave_out_troubled(part: Slice, measured: Measured, troubles: Mapping[int, str]) -> None:
     """A subject that holds a position with a trouble has no figure: a part of it would be less than the truth."""
-    if not troubles:
-        return
+    troubled = np.zeros(len(part.exposure), dtype=np.bool_)
+    troubled[list(troubles)] = True
     found: dict[int, list[str]] = {}
-    for owner, at in zip(part.members.owner.tolist(), part.members.position.tolist(), strict=True):
-        if at in troubles:
-            found.setdefault(owner, []).append(troubles[at])
+    for owner, position in _pairs(part.members, troubled):
+        found.setdefault(owner, []).append(troubles[position])
     for owner, reasons in found.items():
         distinct = list(dict.fromkeys(reasons))
         more = f"; and {len(distinct) - 1} more positions" if len(distinct) > 1 else ""
         measured.leave_out(owner, distinct[0] + more)
+
+
+def _pairs(members: Members, positions: Booleans) -> list[tuple[int, int]]:
+    """Subjects and their positions, as far as these are among the positions (positions,)."""
+    chosen = positions[members.position]
+    return list(zip(members.owner[chosen].tolist(), members.position[chosen].tolist(), strict=True))
+
+
+def _fit_notes(notes: Codes) -> dict[int, str]:
+    """By row, what a reader must know about the fit."""
+    return {row: FIT_NOTE_TEXT[FitNote(notes[row])] for row in np.flatnonzero(notes != FitNote.AS_ASKED).tolist()}
 
 
 MEASURES: Mapping[str, Measure] = {

@@ -2,17 +2,36 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
 
 from monitor.limits.subjects import Members
-from monitor.limits.valuation import LEAST_OF_WINDOW, Scenarios, Valuation, position_currencies
+from monitor.limits.valuation import (
+    LEAST_OF_WINDOW,
+    LastSession,
+    Scenarios,
+    Valuation,
+    expired,
+    foreign,
+    of_kind,
+    position_currencies,
+)
 from monitor.words import InstrumentKind, Mark, MarkKind
 from monitor.world import Booleans, Floats, Integers, Rule, World
 
 NAMED = 3  # how many instruments a reason or a mark lists before it only counts
+
+
+@dataclass(frozen=True)
+class Denominator:
+    """What each subject's amount is divided by; NaN with the reason. doubts: by subject."""
+
+    value: Floats
+    reasons: list[str | None]
+    doubts: list[list[Mark]]
 
 
 @dataclass(frozen=True)
@@ -35,69 +54,75 @@ class Slice:
 
     @cached_property
     def exposure(self) -> Floats:
-        """(positions,) in the slice's currency; zero where unknown: `troubles` names those."""
+        """(positions,) in the slice's currency; zero where unknown: `exposure_troubles` names those."""
         return np.nan_to_num(self.valuation.exposure(self.currency))
 
     @cached_property
     def own_cash(self) -> Booleans:
         """(positions,) cash in the slice's currency, which cannot lose."""
-        holdings, instruments = self.world.holdings, self.world.market.instruments
-        cash = np.array(
-            [item.kind is InstrumentKind.CASH and item.currency == self.currency for item in instruments],
-            dtype=np.bool_,
-        )
-        return cash[holdings.instrument]
+        holdings = self.world.holdings
+        return of_kind(self.world, holdings, InstrumentKind.CASH) & ~foreign(self.world, holdings, self.currency)
 
     def scenarios(self, window: int) -> Scenarios:
         """The newest sessions of the calendar's window, `window` at most."""
-        made = self.valuation.scenarios(self.calendar, self.currency)
-        rows = slice(max(made.pnl.shape[1] - window, 0), None)
-        return Scenarios(made.pnl[:, rows], made.lacks[:, rows], made.riskless, made.log_returns[:, rows])
+        return self.valuation.scenarios(self.calendar, self.currency).newest(window)
 
-    def denominator(self, name: str) -> tuple[Floats, list[str | None]]:
-        """The NAV or the gross exposure of the book (or the firm) that each subject lies in, with reasons for gaps."""
-        of_book = {book: self._denominator(name, book) for book in {item.book for item in self.members.subjects}}
+    def last_session(self) -> LastSession:
+        return self.valuation.last_session(self.calendar, self.currency)
+
+    def denominator(self, name: str) -> Denominator:
+        """The NAV or the gross exposure of the book (or the firm) that each subject lies in."""
+        ask = self._nav if name == "nav" else self._gross
+        of_book = {book: ask(book) for book in {item.book for item in self.members.subjects}}
         found = [of_book[subject.book] for subject in self.members.subjects]
-        return np.array([value for value, _ in found], dtype=np.float64), [reason for _, reason in found]
+        values = np.array([value for value, _, _ in found], dtype=np.float64)
+        return Denominator(values, [reason for _, reason, _ in found], [doubts for _, _, doubts in found])
 
-    def _denominator(self, name: str, book: str | None) -> tuple[float, str | None]:
-        firm, market, holdings = self.world.terms.firm, self.world.market, self.world.holdings
-        books = [item for item in firm.books if book in (None, item.id)]
-        if name == "gross":
-            missing = [holdings.missing[item.id] for item in books if item.id in holdings.missing]
-            numbers = [at for at, item in enumerate(firm.books) if item in books]
-            own = self.valuation.exposure(self.currency)[np.isin(holdings.book, numbers)]
-            gross = float(np.abs(own).sum())
-            if missing or not np.isfinite(gross):
-                return np.nan, missing[0] if missing else "a part of the gross exposure is not known"
-            return (gross, None) if gross > 0 else (np.nan, "there is no gross exposure to divide by")
-        total, place = 0.0, market.currency_index()
-        for item in books:
+    def _gross(self, book: str | None) -> tuple[float, str | None, list[Mark]]:
+        holdings = self.world.holdings
+        numbers = [at for at, item in enumerate(self.world.terms.firm.books) if book in (None, item.id)]
+        missing = [reason for name, reason in holdings.missing.items() if book in (None, name)]
+        own = np.isin(holdings.book, numbers)
+        gross = float(np.abs(self.valuation.exposure(self.currency)[own]).sum())
+        if missing or not np.isfinite(gross):
+            return np.nan, missing[0] if missing else "a part of the gross exposure is not known", []
+        if gross <= 0:
+            return np.nan, "there is no gross exposure to divide by", []
+        doubts = [mark for at, marks in self._doubts.items() if own[at] for mark in marks]
+        return gross, None, shortened(doubts)
+
+    def _nav(self, book: str | None) -> tuple[float, str | None, list[Mark]]:
+        market, total = self.world.market, 0.0
+        place, doubts = market.currency_index(), []
+        for item in self.world.terms.firm.books:
+            if book not in (None, item.id):
+                continue
             nav = self.world.nav[item.id]
             if nav.value is None:
-                return np.nan, nav.reason
+                return np.nan, nav.reason, []
+            if item.currency == self.currency:
+                total += nav.value
+                continue
             total += nav.value * float(market.rate[place[item.currency]] / market.rate[place[self.currency]])
+            doubts += self._old_rates(item.currency)
         if not np.isfinite(total):
-            return np.nan, f"no FX rate turns the NAV into {self.currency}"
-        return total, None
+            return np.nan, f"no FX rate turns the NAV into {self.currency}", []
+        return total, None, shortened(doubts)
 
     def exposure_troubles(self) -> dict[int, str]:
         """Positions whose exposure is not known, with the reason."""
-        world = self.world
-        held = world.holdings.instrument
-        exposure = self.valuation.exposure(self.currency)
-        expired = np.array(
-            [item.expiry is not None and item.expiry < world.recipe.date for item in world.market.instruments]
-        )
-        doubtful = self._is_member() & (world.market.unknown[held] | expired[held] | np.isnan(exposure))
+        world, market, held = self.world, self.world.market, self.world.holdings.instrument
+        member = np.zeros(len(held), dtype=np.bool_)
+        member[self.members.position] = True
+        over = expired(world, world.holdings)
         troubles: dict[int, str] = {}
-        for at in np.flatnonzero(doubtful).tolist():
-            instrument = world.market.instruments[int(held[at])]
-            if world.market.unknown[held[at]]:
+        for at in np.flatnonzero(member & np.isnan(self.valuation.exposure(self.currency))).tolist():
+            instrument = market.instruments[int(held[at])]
+            if market.unknown[held[at]]:
                 troubles[at] = f"no instruments file describes {instrument.id}"
-            elif expired[held[at]]:
+            elif over[at]:
                 troubles[at] = f"{instrument.id} expired on {instrument.expiry}"
-            elif np.isnan(world.market.close[held[at]]):
+            elif np.isnan(market.close[held[at]]):
                 troubles[at] = f"no close of {instrument.id} is known"
             else:
                 troubles[at] = f"no FX rate from {instrument.currency} to {self.currency} is known"
@@ -131,36 +156,61 @@ class Slice:
         return used
 
     def marks(self, window: int | None) -> list[list[Mark]]:
-        """For each subject what makes its figures less certain than they look."""
-        market, held = self.world.market, self.world.holdings.instrument
-        foreign = np.array([item.currency != self.currency for item in market.instruments], dtype=np.bool_)[held]
+        """For each subject what makes its figures less certain than they look. window: sessions that they rest on."""
+        marks: list[list[Mark]] = [list(self._stray) for _ in range(self.size)]
+        owner, position = self.members.owner, self.members.position
+        for at in np.flatnonzero(np.isin(position, list(self._doubts))).tolist():
+            marks[owner[at]] += self._doubts[int(position[at])]
+        if window:
+            made = self.scenarios(window)
+            # A position has no return before its subject's window begins, so that those are not gaps within it.
+            before = made.lacks.shape[1] - self.sessions_used(window)
+            gaps = made.lacks.sum(axis=1)[position] - before[owner]
+            for at in np.flatnonzero(gaps > 0).tolist():
+                name = self.world.market.instruments[int(self.world.holdings.instrument[position[at]])].id
+                marks[owner[at]].append(Mark(MarkKind.GAPS, f"{name} without {int(gaps[at])} returns"))
+        return [shortened(own) for own in marks]
+
+    @cached_property
+    def _stray(self) -> list[Mark]:
+        names = [self.world.market.instruments[at].id for at in self.world.holdings.instrument[self.members.stray]]
+        return stray_marks(names)
+
+    @cached_property
+    def _doubts(self) -> dict[int, list[Mark]]:
+        """By position, what is old in its exposure in the slice's currency."""
+        market, holdings = self.world.market, self.world.holdings
+        held = holdings.instrument
         old_close = (market.carried & ~np.isnan(market.close))[held]
-        old_rate = market.rate_carried[position_currencies(self.world, self.world.holdings)] & foreign
-        gaps = self.scenarios(window).lacks.sum(axis=1) if window else np.zeros(len(held), dtype=np.int64)
-        marked = old_close | old_rate | (gaps > 0)
-        marks: list[list[Mark]] = [[] for _ in range(self.size)]
-        pairs = marked[self.members.position]
-        for owner, at in zip(self.members.owner[pairs].tolist(), self.members.position[pairs].tolist(), strict=True):
+        own_old = market.rate_carried[market.currency_index()[self.currency]]
+        old_rate = market.rate_carried[position_currencies(self.world, holdings)] | own_old
+        old_rate &= foreign(self.world, holdings, self.currency)
+        doubts: dict[int, list[Mark]] = {}
+        for at in np.flatnonzero(old_close | old_rate).tolist():
             instrument = market.instruments[int(held[at])]
             if old_close[at]:
                 note = f"{instrument.id} on its close of {market.closed_on[held[at]]}"
-                marks[owner].append(Mark(MarkKind.CARRIED, note))
+                doubts.setdefault(at, []).append(Mark(MarkKind.CARRIED, note))
             if old_rate[at]:
-                marks[owner].append(Mark(MarkKind.CARRIED, f"an older FX rate of {instrument.currency}"))
-            if gaps[at]:
-                marks[owner].append(Mark(MarkKind.GAPS, f"{instrument.id} without {int(gaps[at])} returns"))
-        return [_shortened(own) for own in marks]
+                doubts.setdefault(at, []).extend(self._old_rates(instrument.currency))
+        return doubts
 
-    def _is_member(self) -> Booleans:
-        member = np.zeros(len(self.world.holdings.quantity), dtype=np.bool_)
-        member[self.members.position] = True
-        return member
+    def _old_rates(self, currency: str) -> list[Mark]:
+        """What is old in the rate from a currency into the slice's."""
+        place, carried = self.world.market.currency_index(), self.world.market.rate_carried
+        old = [code for code in (currency, self.currency) if carried[place[code]]]
+        return [Mark(MarkKind.CARRIED, f"an older FX rate of {code}") for code in old]
 
 
-def _shortened(marks: list[Mark]) -> list[Mark]:
+def stray_marks(names: Iterable[str]) -> list[Mark]:
+    """The doubt that positions which no file describes cast on every group that they may belong to."""
+    return [Mark(MarkKind.MISSING, f"{name} may belong here, no instruments file describes it") for name in names]
+
+
+def shortened(marks: list[Mark]) -> list[Mark]:
     """One mark a kind, naming the first few instruments and counting the others."""
     short = []
-    for kind in MarkKind:
+    for kind in MarkKind if marks else ():
         notes = list(dict.fromkeys(mark.note for mark in marks if mark.kind is kind))
         if notes:
             more = len(notes) - NAMED

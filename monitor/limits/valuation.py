@@ -18,13 +18,37 @@ class Scenarios:
 
     pnl: (positions, n), zero where a position has no return. lacks: (positions, n) no return although the instrument's
     market was open, or before its first close. riskless: (positions,) cash in this very currency.
-    log_returns: (positions, n) of prices in this currency (futures: local), NaN where there is none.
+    relative: (positions, n) price over the price before, in this currency (futures: local); NaN where either is missing
+    or not positive.
     """
 
     pnl: Floats
     lacks: Booleans
     riskless: Booleans
-    log_returns: Floats
+    relative: Floats
+
+    def newest(self, count: int) -> Scenarios:
+        """Those of the newest sessions, `count` at most."""
+        rows = slice(max(self.pnl.shape[1] - count, 0), None)
+        return Scenarios(self.pnl[:, rows], self.lacks[:, rows], self.riskless, self.relative[:, rows])
+
+    def log_returns(self) -> Floats:
+        """(positions, n), zero where a position has no price to compare with, NaN where prices have no logarithm."""
+        with np.errstate(all="ignore"):
+            return np.where(self.lacks & np.isnan(self.relative), 0.0, np.log(self.relative))
+
+
+@dataclass(frozen=True)
+class LastSession:
+    """The hypothetical P&L of the session just ended.
+
+    holdings: those before it. pnl: of each of these positions, NaN where something is not known. carried: (positions,)
+    the session or the one before has no close, or no FX rate, of its own.
+    """
+
+    holdings: Holdings
+    pnl: Floats
+    carried: Booleans
 
 
 @dataclass
@@ -34,40 +58,42 @@ class Valuation:
     world: World
     _exposure: dict[str, Floats] = field(default_factory=dict)
     _scenarios: dict[tuple[str, str], Scenarios] = field(default_factory=dict)
+    _last_session: dict[tuple[str, str], LastSession] = field(default_factory=dict)
 
     def exposure(self, currency: str) -> Floats:
         """Quantity x multiplier x price x FX rate of each position, signed; NaN where something is not known."""
         if currency not in self._exposure:
-            market = self.world.market
-            worth = market.rate / market.rate[market.currency_index()[currency]]
-            self._exposure[currency] = _units(self.world, self.world.holdings) * _of(self.world, market.close, worth)
+            market, holdings = self.world.market, self.world.holdings
+            worth = _into(self.world, market.rate, currency)[position_currencies(self.world, holdings)]
+            self._exposure[currency] = _units(self.world, holdings) * (market.close[holdings.instrument] * worth)
         return self._exposure[currency]
 
     def scenarios(self, calendar: str, currency: str) -> Scenarios:
         """What tonight's positions would have made on each session of the calendar's window, in a currency."""
         key = (calendar, currency)
         if key not in self._scenarios:
-            window = self.world.windows[calendar]
-            market = self.world.market
-            rate = market.rate / market.rate[market.currency_index()[currency]]
-            self._scenarios[key] = _scenarios(self.world, self.world.holdings, window, currency, market.close, rate)
+            world, window = self.world, self.world.windows[calendar]
+            pnl, relative = _pnl(world, world.holdings, window, currency, world.market.close, world.market.rate)
+            lacks = ~np.isfinite(pnl) | _gaps(world, world.holdings, window, currency)[:, 1:]
+            riskless = of_kind(world, world.holdings, InstrumentKind.CASH) & ~foreign(world, world.holdings, currency)
+            self._scenarios[key] = Scenarios(np.where(np.isfinite(pnl), pnl, 0.0), lacks, riskless, relative)
         return self._scenarios[key]
 
-    def last_session(self, calendar: str, currency: str) -> tuple[Holdings, Floats, bool]:
-        """The hypothetical P&L of the session just ended, of the positions held before it.
+    def last_session(self, calendar: str, currency: str) -> LastSession:
+        """What the positions held before the session just ended made on it; nothing when the evening is no session."""
+        key = (calendar, currency)
+        if key not in self._last_session:
+            self._last_session[key] = self._of_last_session(calendar, currency)
+        return self._last_session[key]
 
-        Returns those holdings, the P&L of each position in the currency (NaN where a price is not known), and whether
-        the calendar had a session on the evening's date; without one the P&L is that of no session, zero.
-        """
-        window = self.world.windows[calendar]
-        held = self.world.past.held_before[calendar]
+    def _of_last_session(self, calendar: str, currency: str) -> LastSession:
+        window, held = self.world.windows[calendar], self.world.past.held_before[calendar]
         if len(window.sessions) < 2 or window.sessions[-1] != np.datetime64(self.world.recipe.date):
-            return held, np.zeros(len(held.quantity)), False
-        newest = Window(calendar, window.sessions[-2:], window.close[:, -2:], window.rate[:, -2:], window.gap[:, -2:])
-        rate = newest.rate[:, 0] / newest.rate[self.world.market.currency_index()[currency], 0]
-        made = _scenarios(self.world, held, newest, currency, newest.close[:, 0], rate)
-        known = np.isfinite(newest.close[held.instrument]).all(axis=1)
-        return held, np.where(known | made.riskless, made.pnl[:, 0], np.nan), True
+            return LastSession(held, np.zeros(len(held.quantity)), np.zeros(len(held.quantity), dtype=np.bool_))
+        close, rate = window.close[:, -2:], window.rate[:, -2:]
+        newest = Window(calendar, window.sessions[-2:], close, rate, window.gap[:, -2:], window.rate_gap[:, -2:])
+        pnl, _ = _pnl(self.world, held, newest, currency, close[:, 0], rate[:, 0])
+        return LastSession(held, pnl[:, 0], np.asarray(_gaps(self.world, held, newest, currency).any(axis=1)))
 
 
 def position_currencies(world: World, holdings: Holdings) -> Integers:
@@ -77,43 +103,68 @@ def position_currencies(world: World, holdings: Holdings) -> Integers:
     return by_instrument[holdings.instrument]
 
 
-def _units(world: World, holdings: Holdings) -> Floats:
-    multiplier = np.array([item.multiplier for item in world.market.instruments], dtype=np.float64)
-    return holdings.quantity * multiplier[holdings.instrument]
+def foreign(world: World, holdings: Holdings, currency: str) -> Booleans:
+    """(positions,) in another currency."""
+    return np.asarray(position_currencies(world, holdings) != world.market.currency_index()[currency])
 
 
-def _of(world: World, close: Floats, rate: Floats) -> Floats:
-    holdings = world.holdings
-    return close[holdings.instrument] * rate[position_currencies(world, holdings)]
+def of_kind(world: World, holdings: Holdings, kind: InstrumentKind) -> Booleans:
+    """(positions,) of a kind."""
+    found = np.array([item.kind is kind for item in world.market.instruments], dtype=np.bool_)
+    return found[holdings.instrument]
 
 
-def _scenarios(
-    world: World, holdings: Holdings, window: Window, currency: str, close: Floats, rate: Floats
-) -> Scenarios:
-    """close (instruments,) and rate (currencies,) into the currency are those of the day the positions are valued on.
+def expired(world: World, holdings: Holdings) -> Booleans:
+    """(positions,) whose contract ended before the day on which they are held."""
+    found = [item.expiry is not None and item.expiry < holdings.on for item in world.market.instruments]
+    return np.array(found, dtype=np.bool_)[holdings.instrument]
 
-    Local and FX log returns are added: exposure x (exp(r) - 1) = exposure x (P_d F_d / (P_d-1 F_d-1) - 1). A future
-    earns on its local price alone, at tonight's FX rate; at prices that are not positive, by their difference.
+
+def _into(world: World, rate: Floats, currency: str) -> Floats:
+    """Worth of one unit of each currency in another: 1 of itself, even where no rate leads elsewhere.
+
+    rate: (currencies,) or (currencies, sessions) into the base currency; the result alike.
     """
-    kinds = np.array([item.kind.value for item in world.market.instruments], dtype=object)[holdings.instrument]
-    future = kinds == InstrumentKind.FUTURE.value
-    money = position_currencies(world, holdings)
     own = world.market.currency_index()[currency]
-    riskless = (kinds == InstrumentKind.CASH.value) & (money == own)
-    local = window.close[holdings.instrument]
-    fx = window.rate[money] / window.rate[own]
-    priced = np.where(future[:, None], local, local * fx)
-    tonight = close[holdings.instrument]
-    units = _units(world, holdings) * rate[money]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        relative = priced[:, 1:] / priced[:, :-1]
+    made = np.asarray(rate / rate[own])
+    made[own] = 1.0
+    return made
+
+
+def _units(world: World, holdings: Holdings) -> Floats:
+    """Quantity x multiplier; NaN for what no file describes and for contracts that ended."""
+    multiplier = np.array([item.multiplier for item in world.market.instruments], dtype=np.float64)
+    unfit = world.market.unknown[holdings.instrument] | expired(world, holdings)
+    return np.where(unfit, np.nan, holdings.quantity * multiplier[holdings.instrument])
+
+
+def _pnl(
+    world: World, holdings: Holdings, window: Window, currency: str, close: Floats, rate: Floats
+) -> tuple[Floats, Floats]:
+    """P&L (positions, n), not finite where something is not known, and prices over the prices before (positions, n).
+
+    close (instruments,) and rate (currencies,) are those of the day the positions are valued on. Local and FX log
+    returns are added: exposure x (exp(r) - 1) = exposure x (P_d F_d / (P_d-1 F_d-1) - 1). A future earns on its local
+    price alone, at that day's FX rate; where one of the prices is not positive, by their difference.
+    """
+    future = of_kind(world, holdings, InstrumentKind.FUTURE)
+    money = position_currencies(world, holdings)
+    local, tonight = window.close[holdings.instrument], close[holdings.instrument]
+    with np.errstate(all="ignore"):
+        priced = local * _into(world, window.rate, currency)[money]
+        priced[future] = local[future]
+        positive = priced > 0
+        relative = np.where(positive[:, 1:] & positive[:, :-1], priced[:, 1:] / priced[:, :-1], np.nan)
         moves = tonight[:, None] * (relative - 1.0)
-        by_difference = future & ~(np.nan_to_num(local, nan=1.0) > 0).all(axis=1)
-        moves[by_difference] = np.diff(local[by_difference], axis=1)
-        pnl = units[:, None] * moves
-        log_returns = np.log(np.where(relative > 0, relative, np.nan))
-    lacks = ~np.isfinite(pnl) | window.gap[holdings.instrument, 1:]
-    lacks[riskless] = False
-    pnl[~np.isfinite(pnl)] = 0.0
-    pnl[riskless] = 0.0
-    return Scenarios(pnl, lacks, riskless, log_returns)
+        by_difference = np.isnan(relative[future]) | ~(tonight[future] > 0)[:, None]
+        moves[future] = np.where(by_difference, np.diff(local[future], axis=1), moves[future])
+        units = _units(world, holdings) * _into(world, rate, currency)[money]
+        return units[:, None] * moves, relative
+
+
+def _gaps(world: World, holdings: Holdings, window: Window, currency: str) -> Booleans:
+    """(positions, n + 1) sessions without a close of their own, or without the FX rate that a return needs."""
+    by_rate = foreign(world, holdings, currency) & ~of_kind(world, holdings, InstrumentKind.FUTURE)
+    own = window.rate_gap[world.market.currency_index()[currency]]
+    rates = window.rate_gap[position_currencies(world, holdings)] | own
+    return np.asarray(window.gap[holdings.instrument] | (rates & by_rate[:, None]))

@@ -111,7 +111,7 @@ def _notice(
 
 def _opened(news: EveningNews, excess: Excess, answer: Answer | None) -> Notice:
     day = news.alive.get(excess)
-    age = f"day {day}" if day is not None else f"already {excess.state.value}"
+    age = f"business day {day}" if day is not None else f"already {excess.state.value}"
     value, limit = last_over(excess, answer, news.rules)
     story = Story(
         Tone.OVER,
@@ -151,7 +151,7 @@ def _how_it_opened(news: EveningNews, excess: Excess) -> str:
         return f"The excess opened on {opened} and was told as cured; the check of {checked} takes that cure back."
     if excess.opened_on == news.recipe.date:
         return "The excess opened with this evening's check."
-    return f"The excess opened on {opened}, as the check of {checked} shows."
+    return f"The excess opened on {opened}. It came to light only when the evening of {checked} was checked."
 
 
 def _figure(excess: Excess, answer: Answer | None, rules: Mapping[str, Rule]) -> tuple[Section, ...]:
@@ -216,15 +216,15 @@ def _cured(news: EveningNews, excess: Excess, answer: Answer | None) -> Notice:
     why = _CURED_BY[excess.cured_by] if excess.cured_by else "its figure is back within the limit"
     cured_on = figures.day(excess.cured_on)
     still = " It is still near." if answer is not None and answer.standing is Standing.NEAR else ""
-    unheard = (
-        "" if excess.id in news.on_record else f" The check of {figures.day(news.recipe.date)} shows both only now."
-    )
+    checked = figures.day(news.recipe.date)
+    known = excess.id in news.on_record
+    unheard = "" if known else f" Both came to light only when the evening of {checked} was checked."
     story = Story(
         Tone.CALM,
-        f"CURED: {excess.rule} of {excess.subject.name}, because {why}; {_figure_at_cure(excess, answer, news.rules)}.",
+        f"CURED: {excess.rule} of {excess.subject.name}, because {why}; {_figure_at_cure(news, excess, answer)}.",
         (
             f"The excess opened on {figures.day(excess.opened_on)} and was cured on {cured_on}; "
-            f"its worst was {worst_of(excess, news.rules)}.{unheard}{still}",
+            f"its worst was {worst_of(excess, news.rules)}.{unheard}{still}{_over_since(news, excess)}",
         ),
         (
             *(_figure(excess, answer, news.rules) if answer is not None else ()),
@@ -247,14 +247,24 @@ def _cured(news: EveningNews, excess: Excess, answer: Answer | None) -> Notice:
     return _notice(news, Topic.EXCESS_CURED, excess.id, excess.rule, title, story, data)
 
 
-def _figure_at_cure(excess: Excess, answer: Answer | None, rules: Mapping[str, Rule]) -> str:
+def _figure_at_cure(news: EveningNews, excess: Excess, answer: Answer | None) -> str:
+    cured_on = figures.day(excess.cured_on)
     if answer is not None and answer.value is not None:
-        return f"it is now {figures.value_of(answer)}, {past_limit(answer)}"
+        told = f"{figures.value_of(answer)}, {past_limit(answer)}"
+        return f"it is now {told}" if news.recipe.date == news.aged_on else f"on {cured_on} it was {told}"
     if excess.cured_value is None:
         return "there is no figure of it any more"
-    rule = rules.get(excess.rule)
-    value = figures.figure(excess.cured_value, excess.unit, excess.currency, rule.measure.name if rule else "")
-    return f"it was {value} on {figures.day(excess.cured_on)}"
+    rule = news.rules.get(excess.rule)
+    measure = rule.measure.name if rule else ""
+    return f"on {cured_on} it was {figures.figure(excess.cured_value, excess.unit, excess.currency, measure)}"
+
+
+def _over_since(news: EveningNews, cured: Excess) -> str:
+    """That it is over again by now, where an older evening was checked."""
+    for excess, day in news.alive.items():
+        if (excess.rule, excess.subject) == (cured.rule, cured.subject):
+            return f" It is over again since {figures.day(excess.opened_on)}: excess {excess.id}, day {day}."
+    return ""
 
 
 def _cured_digest(news: EveningNews, rule: str, pairs: list[tuple[Excess, Answer | None]]) -> Notice:

@@ -25,7 +25,7 @@ def nightly_note(news: EveningNews) -> Notice:
     story = Story(
         {Outcome.OVER: Tone.OVER, Outcome.INCOMPLETE: Tone.DOUBT}.get(standings.outcome, Tone.CALM),
         f"{_verdict(news)}: {news.site}, evening of {date}, round {news.recipe.round}{_worst(news)}.",
-        (_checked(news), *_compared(counts, news.before)),
+        (*_older(news), _checked(news), *_compared(counts, news.before)),
         (
             *_of_standing(news, Standing.OVER),
             *_of_standing(news, Standing.NEAR),
@@ -185,6 +185,15 @@ def _checked(news: EveningNews) -> str:
     return (
         f"Checked: {figures.count(len(standings.answers), 'standing')} of {figures.count(len(rules), 'rule')}"
         f"{of_what}. Found: {said}."
+    )
+
+
+def _older(news: EveningNews) -> tuple[str, ...]:
+    if news.recipe.date == news.aged_on:
+        return ()
+    newest = figures.day(news.aged_on)
+    return (
+        f"This is an older evening: the newest on record is that of {newest}. Open excesses are as they are by now.",
     )
 
 

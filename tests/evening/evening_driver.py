@@ -8,16 +8,22 @@ evening_driver.py                   many: a job as JSON a line on stdin, its exi
 from __future__ import annotations
 
 import builtins
+import io
 import json
 import os
 import resource
 import signal
 import sqlite3
 import sys
+import tempfile
+import traceback
 from collections.abc import Callable
+from contextlib import redirect_stdout, suppress
+from pathlib import Path
 from typing import Any
 
 import time_machine
+from evening_scene import FIRST, evening_of, leave_files, write_site
 
 WRITES = ("BEGIN", "COMMIT", "CREATE", "INSERT", "UPDATE", "DELETE", "DROP")
 
@@ -41,11 +47,13 @@ def serve() -> None:
 
 
 def load() -> None:
-    import matplotlib.figure  # noqa: F401
-
-    import monitor.cli  # noqa: F401
-    import monitor.daemon.watch  # noqa: F401
-    import monitor.report.draw  # noqa: F401
+    """Check an evening here once, so that what takes long to load, to compile and to draw is ready in the forks."""
+    with tempfile.TemporaryDirectory() as folder, redirect_stdout(io.StringIO()):
+        site = write_site(Path(folder) / "site")
+        leave_files(site, FIRST, big=True)
+        for command in (["check"], ["report"], ["excess", "list"], ["ledger", "verify"]):
+            with suppress(SystemExit):
+                main(evening_of(FIRST), [*command, "--site", str(site)])
 
 
 def in_child(at: str, arguments: list[str], stdout: str, stderr: str, kill: int, bytes_at_most: int) -> None:
@@ -62,6 +70,8 @@ def in_child(at: str, arguments: list[str], stdout: str, stderr: str, kill: int,
         main(at, arguments)
     except SystemExit as ended:
         code = ended.code
+    except BaseException:
+        traceback.print_exc()
     finally:
         sys.stdout.flush()
         sys.stderr.flush()
@@ -97,8 +107,6 @@ def kill_before(number: int) -> None:
     real_connect = sqlite3.connect
     sqlite3.connect = lambda *given, **named: real_connect(*given, **named, factory=Counted)
     builtins.open = counted(builtins.open, for_writing)
-    import io
-
     io.open = builtins.open
     for name in ("fsync", "replace", "mkdir"):
         setattr(os, name, counted(getattr(os, name)))

@@ -26,10 +26,9 @@ from monitor.state import open_state
 HERE = Path(__file__).parent
 DRIVER = HERE / "evening_driver.py"
 # Weekdays of January to March 2026, on each of which Dublin's exchange is open.
-DAYS = [
-    day for day in (date(2026, 1, 5) + timedelta(days=n) for n in range(80)) if day.weekday() < 5
-]
+DAYS = [day for day in (date(2026, 1, 5) + timedelta(days=n) for n in range(80)) if day.weekday() < 5]
 HISTORY, EVENINGS = DAYS[:45], DAYS[45:]  # the evenings are those from 2026-03-09 on
+LONG_AGO = 1.6e9  # so that nothing in the drop looks as if it were still being written
 FIRST, SECOND, THIRD = EVENINGS[:3]
 TRAY = "- {id: tray, kind: folder, path: tray}"
 RULES = """\
@@ -85,11 +84,11 @@ def write_site(folder: Path, days: Sequence[date] = HISTORY, **settings: Any) ->
         (folder / part).mkdir(parents=True)
     (folder / "site.yaml").write_text(site_text(**settings))
     (folder / "rules" / "limits.yaml").write_text(RULES)
-    drop = folder / "drop"
-    (drop / "instruments.csv").write_text("instrument,currency,kind\nQUAY,EUR,equity\nTIDE,EUR,equity\n")
+    site = folder / "site.yaml"
+    leave(site, "instruments.csv", "instrument,currency,kind\nQUAY,EUR,equity\nTIDE,EUR,equity\n")
     rows = [f"{day},{name},{close(name, day)}" for day in days for name in ("QUAY", "TIDE")]
-    (drop / "history.csv").write_text("\n".join(["date,instrument,close", *rows, ""]))
-    return folder / "site.yaml"
+    leave(site, "history.csv", "\n".join(["date,instrument,close", *rows, ""]))
+    return site
 
 
 def close(name: str, day: date) -> float:
@@ -98,13 +97,15 @@ def close(name: str, day: date) -> float:
     return round(10 * (1 + swing / 400), 4)
 
 
-def leave_files(site: Path, day: date, big: bool = False, kinds: Sequence[str] = ("prices", "positions", "nav")) -> None:
+def leave_files(
+    site: Path, day: date, big: bool = False, kinds: Sequence[str] = ("prices", "positions", "nav")
+) -> None:
     """What other systems leave for an evening."""
     quantity = 1500 if big else 700
     content = {
         "prices": "instrument,close\n" + "".join(f"{name},{close(name, day)}\n" for name in ("QUAY", "TIDE")),
         "positions": f"book,instrument,quantity\nharbour,QUAY,{quantity}\nharbour,TIDE,300\n",
-        "nav": "book,nav\nharbour,20000\n",
+        "nav": f"book,nav\nharbour,{20000 + day.day}\n",
     }
     for kind in kinds:
         leave(site, f"{kind}_{day}.csv", content[kind])
@@ -113,6 +114,7 @@ def leave_files(site: Path, day: date, big: bool = False, kinds: Sequence[str] =
 def leave(site: Path, name: str, text: str) -> Path:
     path = site.parent / "drop" / name
     path.write_text(text)
+    os.utime(path, (LONG_AGO, LONG_AGO))
     return path
 
 
@@ -196,5 +198,4 @@ def account(site: Path) -> dict[str, Any]:
         "entries": {kind: kinds.count(kind) for kind in sorted(set(kinds))},
         "delivered": sorted(path.name.split("_")[1] + path.suffix for path in (site.parent / "tray").glob("*.*")),
         "pages": sorted(path.name for path in (site.parent / "pages").glob("*.html")),
-        "unfinished": [str(path) for path in site.parent.rglob("*.part")],
     }

@@ -55,7 +55,7 @@ def test_the_notice_of_an_excess_says_everything_its_reader_needs(evening: Make)
         "nq-var",
         "One-day 99 % VaR of North Quay",
         "Near at: EUR 1,000,000",
-        "Age: day 1",
+        "Age: business day 1",
         "historical, 99 %, 1 day, 500 sessions, n = 500",
         "EUR 1,190,000 to EUR 1,488,000",
         "carried: the price of QUAYLINE is of 2026-03-02",
@@ -219,7 +219,19 @@ def test_old_evenings_make_one_summary(evening: Make) -> None:
         PastEvening(EVENING, f"r{i}", Outcome.OVER if i % 2 else Outcome.WITHIN, {"over": i % 2}) for i in range(9)
     )
     news = SummaryNews(
-        "Saltmere Trust", evenings, 1300, HASH, RULES, (excess,), (), (), {}, {excess: 12}, EVENING, "night", "2026-03-04.html"
+        "Saltmere Trust",
+        evenings,
+        1300,
+        HASH,
+        RULES,
+        (excess,),
+        (),
+        (),
+        {},
+        {excess: 12},
+        EVENING,
+        "night",
+        "2026-03-04.html",
     )
 
     [notice] = compose_summary(news)
