@@ -7,4 +7,4 @@ set --
 set -- test
 . deploy/venv.sh
 # shellcheck disable=SC2086
-exec .venv/bin/python -m pytest $options
+exec .venv/bin/python -m pytest -n auto --dist loadfile $options

@@ -108,14 +108,13 @@ def _record(
         results=state.archive.put(results.encode(standings)),
         told=tell,
     )
-    tonight = as_evening(recipe, standings, world.terms)
+    settled = _settle(state, index, as_evening(recipe, standings, world.terms), recipe)
     with state.ledger.transaction(now) as transaction:
         entry = transaction.append(fact)
-        settled = _settle(state, index, tonight, recipe)
         for change in settled.facts:
             transaction.append(change)
         if tell:
-            news = evening_news(state, world, standings, settled, edition, entry.seq, entry.hash)
+            news = evening_news(state, index, world, standings, settled, edition, (entry.seq, entry.hash))
             queued = outbox.queue(compose(news), state.site.settings.notices, state.archive, (entry.seq, entry.hash))
             for notice in queued:
                 transaction.append(notice)

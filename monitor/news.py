@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sqlite3
 from collections.abc import Iterable, Mapping
 from datetime import date
 
@@ -19,13 +20,19 @@ from monitor.world import Answer, Standings, Terms, World
 
 
 def evening_news(
-    state: State, world: World, standings: Standings, settled: Settled, edition: int, seq: int, entry_hash: str
+    state: State,
+    index: sqlite3.Connection,
+    world: World,
+    standings: Standings,
+    settled: Settled,
+    edition: int,
+    entry: tuple[int, str],
 ) -> EveningNews:
-    """One evening as it is being settled. seq, hash: its ledger entry."""
+    """One evening as it is being settled. index: as it was before. entry: seq and hash of its ledger entry."""
     recipe = world.recipe
     answers = {(answer.rule, answer.subject.key): answer for answer in standings.answers}
-    before = evenings.before(state.index(), recipe.date, recipe.round)
-    aged_on = evenings.newest_day(state.index()) or recipe.date
+    before = evenings.before(index, recipe.date, recipe.round)
+    aged_on = max(evenings.newest_day(index) or recipe.date, recipe.date)
     new = {excess.id for excess in settled.opened}
     alive_again = [excess for excess in (*settled.opened, *settled.reopened) if excess.alive]
 
@@ -36,18 +43,18 @@ def evening_news(
         site=world.terms.firm.site,
         recipe=recipe,
         edition=edition,
-        seq=seq,
-        hash=entry_hash,
+        seq=entry[0],
+        hash=entry[1],
         standings=standings,
         rules={rule.id: rule for rule in world.terms.rules},
         opened=tuple((excess, tonight(excess, excess.last_on)) for excess in alive_again),
         cured=tuple((excess, tonight(excess, excess.cured_on)) for excess in settled.cured),
         on_record=frozenset(excess.id for excess in (*settled.reopened, *settled.cured)) - new,
         voided=settled.voided,
-        told=_told_then(state, settled.voided),
+        told=_told_then(state, index, settled.voided),
         alive=days_of(state, settled.alive, world.terms, aged_on),
         aged_on=aged_on,
-        refused=_refused_since(state, before.seq if before else 0, recipe.known),
+        refused=_refused_since(state, index, before.seq if before else 0, recipe.known),
         before=before.counts if before else None,
         nightly=state.site.settings.notices.nightly_note,
         page=page_name(recipe.date, recipe.round, edition),
@@ -59,8 +66,9 @@ def summary_news(state: State, untold: list[evenings.CheckedEvening], terms: Ter
     last = untold[-1]
     latest = latest_by_date(untold)
     shown = latest[-1]
-    aged_on = evenings.newest_day(state.index()) or shown.recipe.date
-    register = store.load(state.index())
+    index = state.index()
+    aged_on = evenings.newest_day(index) or shown.recipe.date
+    register = store.load(index)
     facts = _changes_of(state, untold)
     opened, cured, void = (
         {fact.excess for fact in facts if isinstance(fact, kind)} for kind in (ExcessOpened, ExcessCured, ExcessVoided)
@@ -75,7 +83,7 @@ def summary_news(state: State, untold: list[evenings.CheckedEvening], terms: Ter
         opened=tuple(excess for excess in register if excess.id in opened and excess.state is not ExcessState.VOID),
         cured=tuple(excess for excess in register if excess.id in cured and excess.state is ExcessState.CURED),
         voided=voided,
-        told=_told_then(state, voided),
+        told=_told_then(state, index, voided),
         alive=days_of(state, [excess for excess in register if excess.alive], terms, aged_on),
         aged_on=aged_on,
         nightly=state.site.settings.notices.nightly_note,
@@ -102,9 +110,8 @@ def _changes_of(state: State, untold: list[evenings.CheckedEvening]) -> list[Exc
     return found
 
 
-def _told_then(state: State, voided: Iterable[Excess]) -> dict[str, tuple[str, ...]]:
+def _told_then(state: State, index: sqlite3.Connection, voided: Iterable[Excess]) -> dict[str, tuple[str, ...]]:
     """By excess the groups that its rule named when its opening was recorded."""
-    index = state.index()
     found = {}
     for excess in voided:
         opened_by = evenings.newest_at(index, store.recorded_at(index, excess.id))
@@ -125,8 +132,8 @@ def days_of(state: State, alive: Iterable[Excess], terms: Terms, day: date) -> d
     }
 
 
-def _refused_since(state: State, after: int, upto: int) -> tuple[FileRefused, ...]:
-    rows = state.index().execute("SELECT seq FROM refused WHERE seq > ? AND seq <= ? ORDER BY seq", (after, upto))
+def _refused_since(state: State, index: sqlite3.Connection, after: int, upto: int) -> tuple[FileRefused, ...]:
+    rows = index.execute("SELECT seq FROM refused WHERE seq > ? AND seq <= ? ORDER BY seq", (after, upto))
     facts = [state.ledger.entry(seq).fact for (seq,) in rows.fetchall()]
     return tuple(fact for fact in facts if isinstance(fact, FileRefused))
 

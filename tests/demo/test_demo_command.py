@@ -8,7 +8,7 @@ import shutil
 from pathlib import Path
 
 import pytest
-from conftest import Demo, run_duskcheck
+from demo_place import Demo, run_duskcheck
 
 from demo_feed import story
 

@@ -84,6 +84,13 @@ def site(tmp_path_factory: pytest.TempPathFactory) -> SmallSite:
     written += [
         rule("issuers", "{name: weight}", "limit: 99 %", "of_gross", applies_to="{book: quay}", each="issuer"),
         rule("firm-largest", "{name: largest_weight}", "limit: 1e3 %", "of_gross"),
+        rule(
+            "west-short-largest",
+            "{name: largest_weight}",
+            "limit: 99 %",
+            "of_gross",
+            applies_to="{book: west, instrument: BETA}",
+        ),
         rule("firm-leverage", "{name: leverage}", "limit: 9", "ratio"),
         rule("usd-net", "{name: net}", "limit: 1e9", applies_to="{book: quay}", currency="USD"),
     ]
@@ -164,6 +171,7 @@ def test_counts_weights_and_leverage_are_those_written_down_here(answers):
     assert answers["quay-largest", "book:quay"].value == pytest.approx(0.275, rel=1e-12)  # ALFA, 11000 / 40000
     assert answers["west-largest", "book:west"].value == pytest.approx(0.2, rel=1e-12)  # FUTU, 6000 / 30000
     assert answers["west-largest-gross", "book:west"].value == pytest.approx(6000 / 17875, rel=1e-12)
+    assert answers["west-short-largest", "group:book=west; instrument=BETA"].value == pytest.approx(4000 / 17875)
     assert answers["issuers", "group:book=quay; issuer=Fond"].value == pytest.approx(5151 / 26751, rel=1e-12)
     assert answers["issuers", "group:book=quay; issuer=Alfa"].unit == "of_gross"
     # In the firm ALFA is 1100 x 11 = 12100, BETA nets to 100 x 20 x 0.8 = 1600; gross is 26751 + 14300

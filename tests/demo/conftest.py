@@ -1,4 +1,4 @@
-"""What several folders of tests share."""
+"""The demo, run once for all tests of this folder."""
 
 from __future__ import annotations
 
@@ -7,28 +7,9 @@ import shutil
 import subprocess
 import sys
 import zipfile
-from dataclasses import dataclass
-from pathlib import Path
 
 import pytest
-
-PROJECT = Path(__file__).parents[1]
-
-
-def run_duskcheck(*arguments: str | Path, **more: str) -> subprocess.CompletedProcess[str]:
-    """The command in a process of its own."""
-    command = [sys.executable, "-c", "from monitor.cli import main; main()", *map(str, arguments)]
-    environment = os.environ | {"NO_COLOR": "1", "COLUMNS": "200"} | more
-    return subprocess.run(command, capture_output=True, text=True, env=environment, check=False, timeout=200)
-
-
-@dataclass(frozen=True)
-class Demo:
-    """The demo firm after its year. said: what the command printed."""
-
-    folder: Path
-    site: Path
-    said: str
+from demo_place import PROJECT, Demo
 
 
 @pytest.fixture(scope="session")

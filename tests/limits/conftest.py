@@ -1,0 +1,8 @@
+"""The tests of limits use the small site of those of the feed."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+
+sys.path.insert(0, str(Path(__file__).parents[1] / "feed"))
