@@ -38,16 +38,12 @@ def as_evening(recipe: Recipe, standings: Standings, terms: Terms) -> Evening:
     return Evening(
         day=recipe.date,
         held=tuple(_held(answer, rules) for answer in standings.answers),
-        rules=frozenset(rule.id for rule in terms.rules if is_in_force(rule, recipe.date)),
+        rules=frozenset(rule.id for rule in terms.rules if rule.in_force(recipe.date)),
         site_books=frozenset(book.id for book in terms.firm.books),
         known=frozenset(terms.rounds[recipe.round]) - missing,
         # The gross exposure of the whole is known only when that of every position is.
         whole=frozenset(own.subject.book for own in standings.books if own.gross is not None),
     )
-
-
-def is_in_force(rule: Rule, day: date) -> bool:
-    return (rule.in_force_from or day) <= day <= (rule.in_force_to or day)
 
 
 def settle_newest(register: Sequence[Excess], evening: Evening, ids: Iterable[str]) -> Settled:
@@ -65,7 +61,7 @@ def settle_newest(register: Sequence[Excess], evening: Evening, ids: Iterable[st
             cured.append(excess)
             facts.append(_cured(excess))
         elif excess != old:
-            facts.append(_changed(excess, evening.day, "over again"))
+            facts.append(_changed(excess, evening.day, "still over"))
     alive = tuple(excess for excess in after if excess.alive)
     return Settled(tuple(facts), tuple(opened), tuple(cured), (), (), alive)
 

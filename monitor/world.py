@@ -166,6 +166,9 @@ class Rule:
     file: str
     line: int
 
+    def in_force(self, day: date) -> bool:
+        return (self.in_force_from or day) <= day <= (self.in_force_to or day)
+
 
 @dataclass(frozen=True)
 class Terms:

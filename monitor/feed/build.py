@@ -11,10 +11,10 @@ import numpy as np
 from monitor.feed.calendars import Sessions
 from monitor.feed.grid import cut_market, cut_window, make_grid
 from monitor.feed.history import History
-from monitor.feed.holdings import collect_holdings, latest_nav
+from monitor.feed.holdings import collect_holdings, describe, latest_nav
 from monitor.feed.known import Known
 from monitor.feed.lacking import what_is_lacking
-from monitor.words import FileKind, Recipe
+from monitor.words import Recipe
 from monitor.world import Days, Firm, Holdings, Instrument, Past, Scope, Terms, World
 
 
@@ -42,7 +42,7 @@ def build(recipe: Recipe, sources: Sources) -> World:
         name: collect_holdings(own.before(recipe.date), firm, known, history, main) for name, own in main.items()
     }
     names = sorted(set(held).union(*(before for before, _ in earlier.values())))
-    described = _described(known, history)
+    described = describe(known, history)
     instruments = tuple(described.get(name) or Instrument(name, firm.base_currency) for name in names)
     unknown = np.array([name not in described for name in names], dtype=np.bool_)
     holdings = _renumbered(tonight, held, names)
@@ -92,15 +92,6 @@ def _scope(recipe: Recipe, terms: Terms, calendars: Mapping[str, Sessions]) -> S
     """The last round of a date completes it: it answers for the firm and for subjects across books."""
     due = rounds_due(terms, recipe.date, calendars)
     return Scope(terms.rounds[recipe.round], completes=not due or due[-1] == recipe.round)
-
-
-def _described(known: Known, history: History) -> dict[str, Instrument]:
-    described: dict[str, Instrument] = {}
-    for file in known.files(FileKind.INSTRUMENTS):
-        content = history.parsed(file).content
-        if isinstance(content, tuple):
-            described.update((item.id, item) for item in content if isinstance(item, Instrument))
-    return described
 
 
 def _renumbered(holdings: Holdings, own_names: Sequence[str], names: Sequence[str]) -> Holdings:

@@ -13,7 +13,7 @@ from monitor.feed.history import History
 from monitor.feed.kinds import NavRow, PositionRows
 from monitor.feed.known import Known
 from monitor.words import FileKind
-from monitor.world import Book, Firm, Holdings, Nav
+from monitor.world import Book, Firm, Holdings, Instrument, Nav
 
 
 def collect_holdings(
@@ -92,3 +92,13 @@ def latest_nav(
 def _nav_rows(file: UsedFile, history: History) -> tuple[NavRow, ...]:
     content = history.parsed(file).content
     return tuple(row for row in content if isinstance(row, NavRow)) if isinstance(content, tuple) else ()
+
+
+def describe(known: Known, history: History) -> dict[str, Instrument]:
+    """What the instruments files say of each instrument."""
+    described: dict[str, Instrument] = {}
+    for file in known.files(FileKind.INSTRUMENTS):
+        content = history.parsed(file).content
+        if isinstance(content, tuple):
+            described.update((item.id, item) for item in content if isinstance(item, Instrument))
+    return described

@@ -8,15 +8,18 @@ import sqlite3
 import stat
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, replace
+from datetime import date
 from pathlib import Path
 
 from monitor.facts import FileAccepted, FileRefused
 from monitor.feed.history import History
+from monitor.feed.holdings import describe
 from monitor.feed.kinds import Panel, Vocabulary, parse
-from monitor.feed.known import decisions
+from monitor.feed.known import LATEST, Known, decisions
 from monitor.feed.names import UNFINISHED, Name, comes_later, read_name
 from monitor.feed.tables import MOST_FINDINGS
 from monitor.words import FileKind, Finding, WrongUse
+from monitor.world import Instrument
 
 
 @dataclass(frozen=True)
@@ -32,11 +35,12 @@ class Lying:
 
 @dataclass(frozen=True)
 class Taken:
-    """The decision about one file, and its values when it holds prices or rates."""
+    """The decision about one file, and what it holds of prices and rates, or of instruments."""
 
     lying: Lying
     fact: FileAccepted | FileRefused
     panel: Panel | None = None
+    instruments: tuple[Instrument, ...] = ()
 
 
 def look(drop: Path) -> list[Lying]:
@@ -73,9 +77,12 @@ def take(
     """
     decided = decisions(index)
     seen = history.seen()
-    words = replace(words, knows_calendar=history.knows_calendar)
-    for file in lying:
-        name = read_name(file.name, patterns)
+    described = describe(Known(index, seq=LATEST, until=date.max), history)
+    currency_of = {name: item.currency for name, item in described.items()}
+    words = replace(words, knows_calendar=history.knows_calendar, currency_of=currency_of)
+    named = [(file, read_name(file.name, patterns)) for file in lying]
+    # What instruments are comes first, for their prices are held against it.
+    for file, name in sorted(named, key=lambda pair: pair[1] is None or pair[1].kind is not FileKind.INSTRUMENTS):
         identity = (name.kind, name.source, name.day) if name else None
         known = seen.get((file.name, file.size, file.changed))
         if known is not None and decided.stands(file.name, identity, known):
@@ -83,7 +90,9 @@ def take(
         data, trouble = _read(file)
         sha256 = hashlib.sha256(data).hexdigest() if data is not None else None
         if not decided.stands(file.name, identity, sha256):
-            yield _decide(file, name, data, trouble, put, words)
+            taken = _decide(file, name, data, trouble, put, words)
+            currency_of.update((item.id, item.currency) for item in taken.instruments)
+            yield taken
         elif sha256 is not None:
             history.remember_seen(file.name, file.size, file.changed, sha256)
 
@@ -137,7 +146,11 @@ def _decide(
         first=parsed.first,
         last=parsed.last,
     )
-    return Taken(file, accepted, parsed.content if isinstance(parsed.content, Panel) else None)
+    content = parsed.content
+    if isinstance(content, Panel):
+        return Taken(file, accepted, panel=content)
+    instruments = [item for item in content if isinstance(item, Instrument)] if isinstance(content, tuple) else []
+    return Taken(file, accepted, instruments=tuple(instruments))
 
 
 def _refusal(file: Lying, name: Name | None, sha256: str | None, findings: tuple[Finding, ...]) -> FileRefused:

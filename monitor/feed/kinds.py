@@ -53,6 +53,7 @@ class Vocabulary:
     books: tuple[str, ...] | None = None
     currencies: frozenset[str] | None = None
     knows_calendar: Callable[[str], bool] | None = None
+    currency_of: Mapping[str, str] = field(default_factory=dict)
 
     def has_currency(self, code: str) -> bool:
         return self.currencies is None or code in self.currencies
@@ -90,7 +91,7 @@ def _prices(table: Table, day: date | None, words: Vocabulary) -> Parsed:
         if table.has(column):
             table.numbers(column, empty=0.0)
     if table.has("currency"):
-        _known_currencies(table, "currency", words, empty=True)
+        _own_currencies(table, names, words)
     table.once([(name,) for name in names], "instrument")
     return _one_day(day, names, closes)
 
@@ -141,6 +142,16 @@ def _pairs(table: Table, words: Vocabulary) -> tuple[list[str], list[float]]:
         if rate <= 1 / TOO_LARGE:
             table.wrong(at, "rate", f"the rate {rate:g}", "a rate above zero")
     return pairs, rates
+
+
+def _own_currencies(table: Table, names: Sequence[str], words: Vocabulary) -> None:
+    """A price must be in its instrument's currency."""
+    given = _known_currencies(table, "currency", words, empty=True)
+    for at, (name, code) in enumerate(zip(names, given, strict=True)):
+        own = words.currency_of.get(name, code)
+        if code and code != own:
+            expected = f"{own}, its currency by the instruments file"
+            table.wrong(at, "currency", f"a close of {name} in {code}", expected)
 
 
 def _known_currencies(table: Table, column: str, words: Vocabulary, empty: bool = False) -> list[str]:

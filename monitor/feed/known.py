@@ -10,6 +10,7 @@ from datetime import date
 from monitor.facts import Entry, FileAccepted, FileRefused, SettingsAdopted, UsedFile
 from monitor.words import FileKind
 
+LATEST = 2**62  # a sequence after every entry
 TABLES = """
 CREATE TABLE accepted (
     seq INTEGER PRIMARY KEY, name TEXT, kind TEXT, source TEXT, day TEXT, sha256 TEXT, first TEXT, last TEXT) STRICT;

@@ -22,7 +22,9 @@ def evaluate(world: World, questions: Collection[str] | None = None) -> Standing
     """The standings of the rules named in `questions` (None: of all in force), and what none of them says."""
     valuation = Valuation(world)
     rules = [
-        rule for rule in world.terms.rules if in_force(rule, world) and (questions is None or rule.id in questions)
+        rule
+        for rule in world.terms.rules
+        if rule.in_force(world.recipe.date) and (questions is None or rule.id in questions)
     ]
     asked = [(rule, _subjects(rule, world)) for rule in rules]
     answers = [answer for rule, members in asked for answer in _answers(rule, members, valuation)]
@@ -33,11 +35,6 @@ def evaluate(world: World, questions: Collection[str] | None = None) -> Standing
         uncovered=tuple(find_uncovered(world, asked)) if questions is None else (),
         lacking=world.lacking,
     )
-
-
-def in_force(rule: Rule, world: World) -> bool:
-    day = world.recipe.date
-    return (rule.in_force_from or day) <= day <= (rule.in_force_to or day)
 
 
 def _subjects(rule: Rule, world: World) -> Members:

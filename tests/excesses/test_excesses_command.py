@@ -85,7 +85,7 @@ def test_the_story_of_an_excess_reads_from_its_opening_to_its_end(week: Small) -
     assert said[1] == "  owner risk, worst EUR 130.00 on 2026-04-21"
     assert [line.partition("  (entry")[0] for line in said[2:]] == [
         "  2026-04-20  opened at EUR 120.00, limit EUR 100",
-        "  2026-04-21  over again: EUR 130.00, limit EUR 100",
+        "  2026-04-21  still over: EUR 130.00, limit EUR 100",
         "  2026-04-22  cured: within its limit, at EUR 60.00",
     ]
 

@@ -119,3 +119,17 @@ def test_a_refused_file_of_another_day_does_not_trouble_tonight(site):
 
     assert site.world().lacking == ()
     assert len(site.world(WEEK[1]).lacking) == 4  # the file, and three books without positions
+
+
+def test_a_price_in_another_currency_than_its_instrument_is_refused(site):
+    """Also when both files come together and the prices' name comes first."""
+    name = f"prices_{FRIDAY}.csv"
+    site.positions("quay,,", "west,,", "east,,")
+    site.leave("instruments.csv", "instrument,currency\nALFA,EUR\nBETA,USD\n")
+    site.leave(name, "instrument,close,currency\nALFA,1,EUR\nGAMMA,2,JPY\nBETA,1.5,\n")
+    assert site.world().lacking == ()
+
+    site.leave(name, "instrument,close,currency\nALFA,1,USD\nBETA,2,USD\n")
+    assert site.world().lacking == (
+        f"{name}:2:8: found a close of ALFA in USD; expected EUR, its currency by the instruments file",
+    )
