@@ -54,8 +54,9 @@ rules:
     limit: 1000
     unit: amount
 """
-# Counted by hand from the closes with the convention of this program (the 5th worst of 500 log returns before the
-# day, a loss strictly larger): the sessions of July 2008 to June 2009 whose loss passed the forecast.
+# The sessions of July 2008 to June 2009 whose loss passed the forecast of the evening before, and their number for the
+# shorter window: worked out from the same closes beforehand, apart from this program, by its stated convention (99 %,
+# log returns, the day itself not in its window, the 5th worst of 500 and the 3rd of 250, a loss strictly larger).
 EXCEPTIONS_500 = """
 2008-09-04 2008-09-09 2008-09-15 2008-09-17 2008-09-22 2008-09-29 2008-10-02 2008-10-06 2008-10-07 2008-10-09
 2008-10-15 2008-10-22 2008-11-19 2008-11-20 2008-12-01
