@@ -49,7 +49,9 @@ class DemoEvening:
 
 EVENTS = (
     Event(date(2025, 2, 3), "The story begins. North Quay is near its VaR limit, everything else within."),
-    Event(date(2025, 2, 11), "A holiday in Tokyo: its round has no evening, while Dublin and New York trade."),
+    Event(
+        date(2025, 2, 11), "A holiday in Tokyo: Far East stands on its last closes, while Dublin and New York trade."
+    ),
     Event(
         date(2025, 3, 18),
         "A bad day of March 2023 has left the window of 500 sessions: the VaR of North Quay is within without a trade.",
@@ -148,7 +150,7 @@ EVENTS = (
         "Western reduces its positions by three tenths: both excesses are cured.",
         trades=(Resize("western", 0.70),),
     ),
-    Event(date(2025, 12, 25), "Christmas: only Tokyo trades, and only its round has an evening."),
+    Event(date(2025, 12, 25), "Christmas: only Tokyo trades; the other books stand on their last closes."),
     Event(date(2025, 12, 31), "Tokyo is closed until 5 January; the firm is measured on Far East's last positions."),
     Event(
         date(2026, 1, 20),

@@ -13,7 +13,6 @@ from monitor.feed.build import calendars_of
 from monitor.ledger.chain import Transaction
 from monitor.limits.rules import read_rules
 from monitor.limits.wording import differences
-from monitor.notices import outbox
 from monitor.notices.compose import compose_terms
 from monitor.reading.plain import read_yaml
 from monitor.state import State
@@ -66,8 +65,7 @@ def _record(
     settings = state.site.settings
     titles = {rule.id: rule.title for rule in rules}
     notices = compose_terms(settings.site, fact, titles, settings.notices.nightly_note, entry.seq, entry.hash)
-    for queued in outbox.queue(notices, settings.notices, state.archive, (entry.seq, entry.hash)):
-        transaction.append(queued)
+    state.queue(transaction, notices, (entry.seq, entry.hash))
 
 
 def _setting_changes(old: bytes, new: bytes) -> tuple[str, ...]:

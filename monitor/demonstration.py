@@ -7,7 +7,6 @@ from pathlib import Path
 
 from demo_feed import story
 from monitor import evenings
-from monitor.daemon.schedule import moment
 from monitor.evening import Checked, check_evening, recall
 from monitor.evenings import CheckedEvening
 from monitor.paging import draw_evening
@@ -39,7 +38,7 @@ def run_evenings(site_file: Path) -> Iterator[Checked]:
             for name, data in evening.files.items():
                 _write(site.drop / name, data)
             for round_ in site.settings.rounds:
-                now = moment(round_, evening.date, round_.at)
+                now = round_.moment(evening.date, round_.at)
                 terms = prepare(state, now)
                 for due in evenings_between(state, terms, evening.date, evening.date, round_.id):
                     yield check_evening(state, terms, due.day, due.round, now, tell=True)

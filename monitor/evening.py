@@ -24,7 +24,6 @@ from monitor.feed.kinds import Vocabulary
 from monitor.feed.known import Known
 from monitor.limits.evaluate import evaluate
 from monitor.news import evening_news
-from monitor.notices import outbox
 from monitor.notices.compose import compose
 from monitor.settle import Settled, as_evening, settle_again, settle_newest
 from monitor.state import State
@@ -72,7 +71,7 @@ def check_evening(state: State, terms: str, day: date, round_id: str, now: datet
     return Checked(evening, standings, new=True)
 
 
-def lacks_something(state: State, terms: str, day: date, round_id: str) -> tuple[str, ...]:
+def would_lack(state: State, terms: str, day: date, round_id: str) -> tuple[str, ...]:
     """What an evening checked now would lack, in words."""
     return build(_recipe(state, terms, day, round_id), state.sources(day)).lacking
 
@@ -115,9 +114,7 @@ def _record(
             transaction.append(change)
         if tell:
             news = evening_news(state, index, world, standings, settled, edition, (entry.seq, entry.hash))
-            queued = outbox.queue(compose(news), state.site.settings.notices, state.archive, (entry.seq, entry.hash))
-            for notice in queued:
-                transaction.append(notice)
+            state.queue(transaction, compose(news), (entry.seq, entry.hash))
     found = evenings.latest(state.index(), recipe.date, recipe.round)
     if found is None:
         raise RuntimeError(f"the evening of {recipe.date} was recorded and cannot be found")

@@ -23,7 +23,7 @@ CREATE TABLE book_line (
     seq INTEGER NOT NULL, subject TEXT NOT NULL, currency TEXT NOT NULL, value_at_risk REAL, pnl REAL,
     PRIMARY KEY (seq, subject)
 ) STRICT, WITHOUT ROWID;
-CREATE TABLE missed (seq INTEGER PRIMARY KEY, day TEXT NOT NULL, round TEXT NOT NULL, reason TEXT NOT NULL) STRICT;
+CREATE TABLE missed (seq INTEGER PRIMARY KEY, day TEXT NOT NULL, round TEXT NOT NULL) STRICT;
 """
 
 
@@ -73,15 +73,12 @@ def record(index: sqlite3.Connection, entry: Entry) -> None:
                 [(entry.seq, own.subject, own.currency, own.value_at_risk, own.pnl) for own in fact.books],
             )
         case EveningMissed() as fact:
-            index.execute(
-                "INSERT INTO missed VALUES (?, ?, ?, ?)", (entry.seq, fact.day.isoformat(), fact.round, fact.reason)
-            )
+            index.execute("INSERT INTO missed VALUES (?, ?, ?)", (entry.seq, fact.day.isoformat(), fact.round))
 
 
 def latest(index: sqlite3.Connection, day: date, round_id: str) -> CheckedEvening | None:
     """The newest edition of an evening."""
-    found = _rows(index, "WHERE day = ? AND round = ? ORDER BY edition DESC LIMIT 1", (day.isoformat(), round_id))
-    return found[0] if found else None
+    return _first(index, "WHERE day = ? AND round = ? ORDER BY edition DESC", (day.isoformat(), round_id))
 
 
 def all_editions(index: sqlite3.Connection) -> list[CheckedEvening]:
@@ -89,13 +86,13 @@ def all_editions(index: sqlite3.Connection) -> list[CheckedEvening]:
     return _rows(index, "ORDER BY seq", ())
 
 
-def latest_of_all(index: sqlite3.Connection, since: date | None = None) -> list[CheckedEvening]:
+def latest_of_all(index: sqlite3.Connection) -> list[CheckedEvening]:
     """The newest edition of each evening, by date and then in the order of checking."""
     return _rows(
         index,
-        "AS e WHERE day >= ? AND edition = (SELECT MAX(edition) FROM evening AS o WHERE o.day = e.day"
-        " AND o.round = e.round) ORDER BY day, seq",
-        (since.isoformat() if since else "",),
+        "AS e WHERE edition = (SELECT MAX(edition) FROM evening AS o WHERE o.day = e.day AND o.round = e.round)"
+        " ORDER BY day, seq",
+        (),
     )
 
 
@@ -106,16 +103,12 @@ def newest_at(index: sqlite3.Connection, seq: int) -> CheckedEvening:
 
 def before(index: sqlite3.Connection, day: date, round_id: str) -> CheckedEvening | None:
     """The newest edition of the evening before a date, of the same round."""
-    found = _rows(
-        index, "WHERE day < ? AND round = ? ORDER BY day DESC, edition DESC LIMIT 1", (day.isoformat(), round_id)
-    )
-    return found[0] if found else None
+    return _first(index, "WHERE day < ? AND round = ? ORDER BY day DESC, edition DESC", (day.isoformat(), round_id))
 
 
 def after(index: sqlite3.Connection, day: date, round_id: str) -> CheckedEvening | None:
     """The newest edition of the evening after a date, of the same round."""
-    found = _rows(index, "WHERE day > ? AND round = ? ORDER BY day, edition DESC LIMIT 1", (day.isoformat(), round_id))
-    return found[0] if found else None
+    return _first(index, "WHERE day > ? AND round = ? ORDER BY day, edition DESC", (day.isoformat(), round_id))
 
 
 def any_after(index: sqlite3.Connection, day: date) -> bool:
@@ -154,8 +147,7 @@ def untold(index: sqlite3.Connection, after: int) -> list[CheckedEvening]:
 
 def newest(index: sqlite3.Connection, round_id: str) -> CheckedEvening | None:
     """The newest edition of a round's newest evening."""
-    found = _rows(index, "WHERE round = ? ORDER BY day DESC, edition DESC LIMIT 1", (round_id,))
-    return found[0] if found else None
+    return _first(index, "WHERE round = ? ORDER BY day DESC, edition DESC", (round_id,))
 
 
 def days_done(index: sqlite3.Connection, round_id: str) -> set[date]:
@@ -164,6 +156,11 @@ def days_done(index: sqlite3.Connection, round_id: str) -> set[date]:
         "SELECT day FROM evening WHERE round = ? UNION SELECT day FROM missed WHERE round = ?", (round_id, round_id)
     )
     return {date.fromisoformat(day) for (day,) in rows}
+
+
+def _first(index: sqlite3.Connection, condition: str, values: tuple[Any, ...]) -> CheckedEvening | None:
+    found = _rows(index, f"{condition} LIMIT 1", values)
+    return found[0] if found else None
 
 
 def _rows(index: sqlite3.Connection, condition: str, values: tuple[Any, ...]) -> list[CheckedEvening]:

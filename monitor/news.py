@@ -11,6 +11,8 @@ from monitor.excesses import store
 from monitor.excesses.register import Excess
 from monitor.facts import EveningChecked, ExcessCured, ExcessOpened, ExcessVoided, FileRefused
 from monitor.feed.calendars import Sessions
+from monitor.feed.known import refused_between
+from monitor.notices.figures import not_measured
 from monitor.notices.news import EveningNews, PastEvening, SummaryNews
 from monitor.report.pages import page_name
 from monitor.settle import ExcessFact, Settled
@@ -133,11 +135,14 @@ def days_of(state: State, alive: Iterable[Excess], terms: Terms, day: date) -> d
 
 
 def _refused_since(state: State, index: sqlite3.Connection, after: int, upto: int) -> tuple[FileRefused, ...]:
-    rows = index.execute("SELECT seq FROM refused WHERE seq > ? AND seq <= ? ORDER BY seq", (after, upto))
-    facts = [state.ledger.entry(seq).fact for (seq,) in rows.fetchall()]
+    facts = [state.ledger.entry(seq).fact for seq in refused_between(index, after, upto)]
     return tuple(fact for fact in facts if isinstance(fact, FileRefused))
 
 
 def _past(state: State, own: evenings.CheckedEvening) -> PastEvening:
     standings = results.decode(state.archive.get(own.results))
-    return PastEvening(own.recipe.date, own.recipe.round, own.outcome, own.counts, standings.lacking)
+    reasons = list(standings.lacking)
+    if standings.unmeasured:
+        first = standings.unmeasured[0].reason
+        reasons.append(f"{not_measured(len(standings.unmeasured))}, the first because {first}")
+    return PastEvening(own.recipe.date, own.recipe.round, own.outcome, own.counts, tuple(reasons))

@@ -58,7 +58,7 @@ def page_of(state: State, evening: CheckedEvening, standings: Standings) -> Page
         edition=evening.edition,
         seq=evening.seq,
         hash=evening.hash,
-        checked_at=evening.at,
+        checked_at=f"{evening.at[:10]} {evening.at[11:16]} UTC",
         standings=standings,
         before=_before(state, earlier) if earlier else None,
         rules={rule.id: rule for rule in terms.rules},

@@ -28,7 +28,7 @@ from monitor.notices.delivery import Surroundings
 from monitor.paging import draw_evening, draw_missing
 from monitor.site import Site
 from monitor.state import State, open_state
-from monitor.words import Outcome, WrongUse
+from monitor.words import Outcome
 
 OLD_AFTER = 5  # business days after which an evening is told in a summary, not by its own alarms
 LOCK_WAIT = 30
@@ -84,8 +84,6 @@ def sessions_of(state: State, terms: str, until: date) -> dict[str, Sessions]:
 def evenings_between(state: State, terms: str, first: date, last: date, round_id: str | None) -> list[Due]:
     """The evenings of a range of dates in order; those of one round only when it is named."""
     signed = state.terms(terms)
-    if round_id is not None and round_id not in signed.rounds:
-        raise WrongUse(f"found the round {round_id!r}; expected one of {', '.join(signed.rounds)}")
     sessions = sessions_of(state, terms, last)
     days = [date.fromordinal(ordinal) for ordinal in range(first.toordinal(), last.toordinal() + 1)]
     found = [Due(day, name) for day in days for name in rounds_due(signed, day, sessions)]
@@ -113,10 +111,8 @@ def tell_summary(state: State, terms: str, now: datetime) -> CheckedEvening | No
     if not untold:
         return None
     news = summary_news(state, untold, state.terms(terms))
-    settings = state.site.settings.notices
     with state.ledger.transaction(now) as transaction:
-        for queued in outbox.queue(compose_summary(news), settings, state.archive, (news.seq, news.hash)):
-            transaction.append(queued)
+        state.queue(transaction, compose_summary(news), (news.seq, news.hash))
     return latest_by_date(untold)[-1]
 
 

@@ -35,6 +35,7 @@ LATER_KEYS = {
 ShapeT = TypeVar("ShapeT", bound=Shape)
 ANY_DAY = date(2026, 1, 15)  # rounds are put in the order of a day; the zones move too little to change it
 RULE_SUFFIXES = (".yaml", ".yml")
+REMEDY = "Name it with --site; `duskcheck demo` sets up one to look at"
 
 
 class Paths(Shape):
@@ -94,13 +95,13 @@ class SiteSettings:
     def terms(self, rules: tuple[Rule, ...]) -> Terms:
         """These settings and the rules read with them, as a world carries them."""
         tail = default_tail(self.defaults)
-        windows = [call.parameters.get("window") for call in (tail, *(rule.measure for rule in rules))]
-        rounds = sorted(self.rounds, key=lambda each: each.instant(ANY_DAY))
+        windows = [call.parameters.get("window", 0) for call in (tail, *(rule.measure for rule in rules))]
+        rounds = sorted(self.rounds, key=lambda each: each.moment(ANY_DAY, each.at))
         return Terms(
             firm=self.firm(),
             rounds={each.id: each.books for each in rounds},
             rules=rules,
-            longest_window=max(window for window in windows if isinstance(window, int)),
+            longest_window=max(windows),
             days_a_year=self.defaults.days_a_year,
             nav_age=self.defaults.nav_age,
             default_tail=tail,
@@ -190,7 +191,7 @@ def open_site(path: Path) -> Site:
         data = file.read_bytes()
     except OSError as error:
         reason = error.strerror or str(error)
-        finding = Finding(str(path), None, None, reason, "a site file", "`duskcheck demo` sets up one to look at")
+        finding = Finding(str(path), None, None, reason, "a site file", REMEDY)
         raise WrongUse(findings=(finding,)) from None
     settings = read_site(str(path), data)
     return Site(settings, file, data, _rule_files(file.parent, settings.paths.rules))
@@ -202,8 +203,12 @@ def _rule_files(folder: Path, rules: str) -> tuple[tuple[str, bytes], ...]:
         files = sorted(file for file in (folder / rules).iterdir() if file.suffix in RULE_SUFFIXES)
         found = tuple((f"{rules}/{file.name}", file.read_bytes()) for file in files if not file.name.startswith("."))
     except OSError as error:
-        reason = error.strerror or str(error)
-        raise WrongUse(findings=(Finding(rules, None, None, reason, "the folder of rule files"),)) from None
+        reason, place = error.strerror or str(error), Path(error.filename or rules)
+        if place.suffix in RULE_SUFFIXES:
+            finding = Finding(f"{rules}/{place.name}", None, None, reason, "a rule file that can be read")
+        else:
+            finding = Finding(rules, None, None, reason, "the folder of rule files")
+        raise WrongUse(findings=(finding,)) from None
     if not found:
         expected = "at least one rule file (*.yaml)"
         raise WrongUse(findings=(Finding(rules, None, None, "no rule file", expected),))

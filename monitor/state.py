@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import sqlite3
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from datetime import date
@@ -19,13 +19,14 @@ from monitor.feed.calendars import Sessions
 from monitor.feed.history import History
 from monitor.feed.known import Known
 from monitor.ledger.archive import Archive
-from monitor.ledger.chain import Ledger
+from monitor.ledger.chain import Ledger, Transaction
 from monitor.ledger.disk import disk_errors
 from monitor.ledger.index import Index, Projection
 from monitor.ledger.links import Head
 from monitor.ledger.table import is_damage, sqlite_errors
 from monitor.limits.rules import read_rules
 from monitor.notices import outbox
+from monitor.notices.message import Notice
 from monitor.site import Site, read_site
 from monitor.words import Damaged, DuskcheckError
 from monitor.world import Terms
@@ -107,6 +108,11 @@ class State:
             # A line that a full disk cut off stays by itself.
             file.write(("\n" if written and not written.endswith("\n") else "") + "".join(new))
 
+    def queue(self, transaction: Transaction, notices: Sequence[Notice], after: tuple[int, str]) -> None:
+        """Record what must be told, for every channel and receiver. after: seq and hash of the entry it follows."""
+        for queued in outbox.queue(notices, self.site.settings.notices, self.archive, after):
+            transaction.append(queued)
+
     def sources(self, day: date) -> Sources:
         """For building the world of a date: the sessions are those the installed package knows."""
         return self._sources(lambda name: self.history.sessions(name, until=day))
@@ -139,21 +145,21 @@ def open_state(site: Site, create: bool = False) -> Iterator[State]:
     with Ledger.open(path, create=create) as ledger:
         state = State(site, ledger)
         try:
-            with _history_errors(state):
+            with _index_errors(state):
                 yield state
         finally:
             state.close()
 
 
 @contextmanager
-def _history_errors(state: State) -> Iterator[None]:
-    """What goes wrong with the cache of prices, in words; a broken one is thrown away, for it can be made again."""
+def _index_errors(state: State) -> Iterator[None]:
+    """What goes wrong while the index is asked, in words; a broken one is thrown away, for it can be made again."""
     try:
         yield
-    except sqlite3.Error as error:  # the ledger and the index put theirs into words themselves
-        path = state.site.state / "history.sqlite"
+    except sqlite3.Error as error:  # the ledger and the history put theirs into words themselves
+        path = state.site.state / "index.sqlite"
         if is_damage(error):
-            state.history.close()
+            state.close()
             path.unlink(missing_ok=True)
             raise DuskcheckError(
                 f"{path} was broken and has been thrown away. It is a cache: run the command again, and it is made anew"

@@ -10,6 +10,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from datetime import date
 from decimal import Decimal
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -94,7 +95,6 @@ class Market:
     unknown: Booleans
     currencies: tuple[str, ...]
     rate: Floats
-    rate_on: Days
     rate_carried: Booleans
 
     def currency_index(self) -> Mapping[str, int]:
@@ -130,7 +130,7 @@ class MeasureCall:
     """A measure by name with its parameters, the site's defaults filled in."""
 
     name: str
-    parameters: Mapping[str, object]
+    parameters: Mapping[str, Any]
 
 
 @dataclass(frozen=True)

@@ -66,14 +66,16 @@ def blocks(start: str) -> list[str]:
 
 def test_the_site_and_the_rules_of_the_readme_can_be_used():
     [site] = blocks("site:")
-    [channels] = blocks("channels:")
+    [people_and_channels] = blocks("people:")
     [rules] = blocks("rules:")
 
     settings = read_site("site.yaml", site.encode())
-    people = "people:\n  - {id: officer, name: Officer, address: officer@lantern.example}\n"
-    read_site("site.yaml", (site[: site.index("channels:")] + people + channels).encode())
+    read_site("site.yaml", (site[: site.index("channels:")] + people_and_channels).encode())
 
-    assert [rule.id for rule in read_rules([("rules.yaml", rules.encode())], settings.rule_context())] == ["main-var"]
+    assert [rule.id for rule in read_rules([("rules.yaml", rules.encode())], settings.rule_context())] == [
+        "main-var",
+        "main-cash",
+    ]
 
 
 def test_the_readme_states_the_job_in_one_paragraph_and_names_the_set_up_commands():

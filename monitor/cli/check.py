@@ -7,7 +7,6 @@ from collections import Counter
 from collections.abc import Iterator, Sequence
 from datetime import UTC, date, datetime, timedelta
 from pathlib import Path
-from zoneinfo import ZoneInfo
 
 import click
 from rich.console import Console
@@ -17,9 +16,10 @@ from monitor.cli.documents import evening_document
 from monitor.cli.options import Day, json_option, print_json, site_option
 from monitor.cli.screen import print_evening
 from monitor.daemon.schedule import newest_due
-from monitor.daemon.settings import Round
 from monitor.evening import Checked
+from monitor.facts import FileRefused
 from monitor.feed import intake
+from monitor.feed.known import refused_between
 from monitor.notices import outbox
 from monitor.notices.figures import count
 from monitor.run import (
@@ -62,12 +62,14 @@ def check(
     site = open_site(site_file)
     now = datetime.now(UTC)
     with open_for_checking(site) as state:
+        before = state.ledger.head().seq
         terms = prepare(state, now, _settled(site.drop))
+        _say_what_was_refused(state, before)
         due = _due(state, terms, (first or day, last or day), round_id, now)
         checked = None
         outcomes = []
         for checked in _in_order(check_in_order(state, terms, due, now), due, as_json):
-            outcomes.append(checked.evening.outcome)
+            outcomes.append(checked.standings.outcome)
             if as_json:
                 print_json(evening_document(state, checked))
         sent = finish(state, terms, checked, now)
@@ -92,19 +94,15 @@ def _due(
         if not newest:
             raise WrongUse(f"found no session of the calendars of {what} lately; give the evening's --date")
         return [Due(day, name) for name, day in newest if day == max(day for _, day in newest)]
-    today = max(_today(each, now) for each in rounds.values())
+    today = max(each.today(now) for each in rounds.values())
     if last > today:
         raise WrongUse(f"found the date {last}, which is still to come; expected one up to today, {today}")
     found = evenings_between(state, terms, first, last, round_id)
-    begun = [due for due in found if due.day <= _today(rounds[due.round], now)]
+    begun = [due for due in found if due.day <= rounds[due.round].today(now)]
     if not begun:
-        raise WrongUse(f"{first} to {last}: no session of the calendars of {what}; expected at least one")
+        days = f"the date {first}, which is" if first == last else f"the dates {first} to {last}, which hold"
+        raise WrongUse(f"found {days} no session of the calendars of {what}; expected a business date")
     return begun
-
-
-def _today(round_: Round, now: datetime) -> date:
-    """Which day it is where the round is checked."""
-    return now.astimezone(ZoneInfo(round_.time_zone)).date()
 
 
 def _settled(drop: Path) -> list[intake.Lying]:
@@ -118,6 +116,17 @@ def _settled(drop: Path) -> list[intake.Lying]:
         if file not in again:
             click.echo(f"duskcheck: {file.name} is still being written and was left for the next check", err=True)
     return [file for file in lying if file in again]
+
+
+def _say_what_was_refused(state: State, after: int) -> None:
+    """Every reason why a file was refused just now, one line a reason."""
+    for seq in refused_between(state.index(), after, state.ledger.head().seq):
+        fact = state.ledger.entry(seq).fact
+        if isinstance(fact, FileRefused):
+            for finding in fact.findings:
+                click.echo(f"duskcheck: refused: {finding}", err=True)
+            if left := fact.reasons - len(fact.findings):
+                click.echo(f"duskcheck: refused: {fact.name}: {count(left, 'further reason')}", err=True)
 
 
 def _say_what_waits(sent: Sequence[outbox.Result]) -> None:

@@ -46,7 +46,7 @@ def demo(folder: Path) -> int:
         for event in story.EVENTS:
             console.print(f"  {event.date}  {event.text}")
         console.print()
-        print_evening(state, checked[-1], [own.evening.outcome for own in checked])
+        print_evening(state, checked[-1], [own.standings.outcome for own in checked])
     differing = [str(own.recipe.date) for own, same in again if not same]
     counts = Counter(own.state.value for own in register)
     excesses = ", ".join(f"{number} {word}" for word, number in sorted(counts.items()))

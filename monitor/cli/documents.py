@@ -25,7 +25,7 @@ def evening_document(state: State, checked: Checked) -> dict[str, Any]:
         "business_date": str(day),
         "round": evening.recipe.round,
         "edition": evening.edition,
-        "outcome": evening.outcome,
+        "outcome": standings.outcome,
         "standings": [_standing(answer, alive.get((answer.rule, answer.subject.key))) for answer in standings.answers],
         "withheld": [],
         "unmeasured": [{"subject": gap.subject.key, "reason": gap.reason} for gap in standings.unmeasured],

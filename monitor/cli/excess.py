@@ -73,8 +73,9 @@ def list_excesses(site_file: Path, as_json: bool, wanted: str | None, book: str 
         table.add_column(heading, no_wrap=True)
     table.add_column("state", min_width=len("2026-12-31"))
     table.add_column("rule and subject", min_width=16, overflow="fold")
-    for heading in ("last over at", "limit", "owner"):
-        table.add_column(heading, overflow="fold")
+    owned = any(own.owner for own in found)
+    for heading in ("last over at", "limit", *(["owner"] if owned else [])):
+        table.add_column(heading, overflow="fold", min_width=len(heading))
     for own in found:
         table.add_row(
             own.id,
@@ -82,7 +83,7 @@ def list_excesses(site_file: Path, as_json: bool, wanted: str | None, book: str 
             _state(own, days.get(own)),
             f"{own.rule} of {own.subject.name}",
             *last_over(own, None, rules),
-            own.owner or "",
+            *([own.owner or ""] if owned else []),
         )
     console = Console(highlight=False)
     console.print(table)

@@ -9,12 +9,13 @@ from pathlib import Path
 import click
 
 from monitor.cli.options import json_option, print_json, site_option
+from monitor.facts import FACTS
 from monitor.ledger.archive import Archive
 from monitor.ledger.chain import Ledger
 from monitor.ledger.links import Head
 from monitor.ledger.verify import verify
 from monitor.site import open_site
-from monitor.words import Exit
+from monitor.words import Exit, WrongUse
 
 HEAD = re.compile(r"(\d+)[ :]([0-9a-f]{64})")
 
@@ -58,12 +59,16 @@ def verify_ledger(site_file: Path, as_json: bool, head: str | None) -> int:
 @json_option
 @click.option("--from", "first", type=int, default=1, help="The first entry.")
 @click.option("--to", "last", type=int, help="The last entry; the newest when left out.")
-@click.option("--kind", help="Entries of one kind only, as evening.checked.")
+@click.option(
+    "--kind", type=click.Choice(list(FACTS)), metavar="KIND", help="Entries of one kind only, as evening.checked."
+)
 def show_ledger(site_file: Path, as_json: bool, first: int, last: int | None, kind: str | None) -> None:
     """The entries, one a line. With --json each line is the exact text that was hashed."""
     site = open_site(site_file)
     with Ledger.open(site.state / "ledger.sqlite") as opened:
         newest = opened.head().seq
+        if first > newest + 1:
+            raise WrongUse(f"found --from {first}; expected the number of an entry: the newest is {newest}")
         for entry in opened.entries(max(first, 1) - 1, min(last or newest, newest)):
             if kind not in (None, entry.fact.KIND):
                 continue

@@ -9,6 +9,7 @@ import click
 from monitor.cli.options import json_option, print_json, site_option
 from monitor.limits.rules import read_rules
 from monitor.limits.wording import sentence
+from monitor.notices.figures import count
 from monitor.site import open_site
 
 
@@ -29,7 +30,7 @@ def check_rules(site_file: Path, as_json: bool, files: tuple[Path, ...]) -> None
     if as_json:
         print_json({"files": [name for name, _ in given], "rules": [rule.id for rule in found]})
     else:
-        click.echo(f"{len(found)} rules in {len(given)} files: nothing wrong")
+        click.echo(f"{count(len(found), 'rule')} in {count(len(given), 'file')}: nothing wrong")
 
 
 @rules.command("show")
@@ -57,6 +58,6 @@ def show_rules(site_file: Path, as_json: bool) -> None:
         )
         return
     for rule in found:
-        click.echo(f"{rule.id} ({rule.file}:{rule.line})\n  {sentence(rule)}")
+        click.echo(f"{rule.title} ({rule.file}:{rule.line})\n  {sentence(rule)}")
         if rule.because:
             click.echo(f"  because: {rule.because}")

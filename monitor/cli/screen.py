@@ -8,9 +8,11 @@ from rich.console import Console
 from rich.table import Table
 
 from monitor.evening import Checked
+from monitor.feed.lacking import listed
 from monitor.notices import figures
 from monitor.report.headline import by_urgency, headline
 from monitor.report.pages import page_name
+from monitor.report.tables import unmeasured
 from monitor.state import State
 from monitor.words import Outcome, Standing
 from monitor.world import Answer
@@ -37,6 +39,11 @@ def print_evening(state: State, checked: Checked, outcomes: Sequence[Outcome]) -
         console.print(f"and {len(worth_telling) - SHOWN} more: see the page")
     for cause in standings.lacking:
         console.print(f"lacking: {cause}")
+    gaps = unmeasured(standings)
+    for gap in gaps[:SHOWN]:
+        console.print(f"not measured: {listed(gap.subjects)}: {gap.reason}")
+    if len(gaps) > SHOWN:
+        console.print(f"and {len(gaps) - SHOWN} more reasons: see the page")
     page = state.site.pages / page_name(recipe.date, recipe.round, evening.edition)
     console.print(f"page: {page}", soft_wrap=True)
     said = "recorded as" if checked.new else "nothing new since it was recorded as"

@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from datetime import date, datetime, time, timedelta
-from zoneinfo import ZoneInfo
+from datetime import date, datetime, timedelta
 
 from monitor.daemon.settings import Round
 from monitor.feed.build import rounds_due
@@ -14,21 +13,16 @@ from monitor.world import Terms
 LONGEST_CLOSURE = 30  # days; longer than any exchange of the calendars stays closed
 
 
-def moment(round_: Round, day: date, at: time) -> datetime:
-    """A time of day of a business date in the round's zone."""
-    return datetime.combine(day, at, ZoneInfo(round_.time_zone))
-
-
 def newest_due(
     rounds: Sequence[Round], terms: Terms, sessions: Mapping[str, Sessions], now: datetime
 ) -> list[tuple[str, date]]:
     """For each round the newest business date whose time has come."""
     found = []
     for each in rounds:
-        today = now.astimezone(ZoneInfo(each.time_zone)).date()
+        today = each.today(now)
         for back in range(LONGEST_CLOSURE):
             day = today - timedelta(days=back)
-            if each.id in rounds_due(terms, day, sessions) and moment(each, day, each.at) <= now:
+            if each.id in rounds_due(terms, day, sessions) and each.moment(day, each.at) <= now:
                 found.append((each.id, day))
                 break
     return found
@@ -36,8 +30,8 @@ def newest_due(
 
 def due_since(round_: Round, terms: Terms, sessions: Mapping[str, Sessions], after: date, now: datetime) -> list[date]:
     """The business dates of a round after a date whose time has come, in order."""
-    today = now.astimezone(ZoneInfo(round_.time_zone)).date()
-    days = [date.fromordinal(ordinal) for ordinal in range(after.toordinal() + 1, today.toordinal() + 1)]
+    last = round_.today(now)
+    days = [date.fromordinal(ordinal) for ordinal in range(after.toordinal() + 1, last.toordinal() + 1)]
     return [
-        day for day in days if round_.id in rounds_due(terms, day, sessions) and moment(round_, day, round_.at) <= now
+        day for day in days if round_.id in rounds_due(terms, day, sessions) and round_.moment(day, round_.at) <= now
     ]

@@ -27,9 +27,13 @@ class Round:
     files_due_by: time
     give_up_at: time
 
-    def instant(self, day: date) -> datetime:
-        """When the round is due on a business date."""
-        return datetime.combine(day, self.at, ZoneInfo(self.time_zone))
+    def moment(self, day: date, at: time) -> datetime:
+        """One of the round's times on a business date."""
+        return datetime.combine(day, at, ZoneInfo(self.time_zone))
+
+    def today(self, now: datetime) -> date:
+        """Which day it is where the round is checked."""
+        return now.astimezone(ZoneInfo(self.time_zone)).date()
 
 
 class RoundShape(Shape):

@@ -11,14 +11,13 @@ from zoneinfo import ZoneInfo
 
 from monitor import evenings
 from monitor.adoption import adopt
-from monitor.daemon.schedule import due_since, moment, newest_due
+from monitor.daemon.schedule import due_since, newest_due
 from monitor.daemon.settings import Round
-from monitor.evening import Checked, check_evening, lacks_something, take_in
+from monitor.evening import Checked, check_evening, take_in, would_lack
 from monitor.facts import EveningMissed
 from monitor.feed import intake
-from monitor.notices import outbox
+from monitor.feed.known import accepted_after
 from monitor.notices.compose import compose_missed, compose_trouble
-from monitor.notices.message import Notice
 from monitor.run import Due, finish, hand, is_recent, open_for_checking, send, sessions_of
 from monitor.site import Site, open_site
 from monitor.state import State
@@ -123,7 +122,7 @@ class Watch:
             else:
                 found |= {(each, day) for _, day in newest_due([each], signed, sessions, now)}
             found |= {(each, own.day) for own in self.late if own.round == each.id}
-        due = [(moment(each, day, each.at), each, day) for each, day in found]
+        due = [(each.moment(day, each.at), each, day) for each, day in found]
         return [(each, day) for at, each, day in sorted(due, key=lambda one: one[0]) if at <= now]
 
     def _note_late_files(self, state: State, terms: str, now: datetime) -> None:
@@ -133,12 +132,10 @@ class Watch:
         for recent evenings.
         """
         index, started = state.index(), self.known == 0
-        files = index.execute("SELECT day, MAX(seq) FROM accepted WHERE seq > ? GROUP BY day", (self.known,)).fetchall()
-        for day, seq in files:
+        for day, seq in accepted_after(index, self.known):
             for each in self.site.settings.rounds:
-                dated = date.fromisoformat(day) if day else None
-                own = evenings.latest(index, dated, each.id) if dated else evenings.newest(index, each.id)
-                if own is None or own.recipe.known >= seq or not (dated or own.outcome is Outcome.INCOMPLETE):
+                own = evenings.latest(index, day, each.id) if day else evenings.newest(index, each.id)
+                if own is None or own.recipe.known >= seq or not (day or own.outcome is Outcome.INCOMPLETE):
                     continue
                 due = Due(own.recipe.date, each.id)
                 if not started or is_recent(state, terms, due, now):
@@ -148,9 +145,9 @@ class Watch:
     def _check(self, state: State, terms: str, round_: Round, day: date, now: datetime) -> Checked | None:
         """Check one evening, or wait for its files until it is given up."""
         due = Due(day, round_.id)
-        given_up = now >= moment(round_, day, round_.give_up_at)
+        given_up = now >= round_.moment(day, round_.give_up_at)
         try:
-            lacking = lacks_something(state, terms, day, round_.id)
+            lacking = would_lack(state, terms, day, round_.id)
             if lacking and not given_up:
                 LOG.info("the evening of %s, round %s, waits: %s", day, round_.id, "; ".join(lacking))
                 return None
@@ -174,8 +171,7 @@ class Watch:
         with state.ledger.transaction(now) as transaction:
             entry = transaction.append(fact)
             notices = compose_missed(settings.site, fact, settings.notices.nightly_note, entry.seq, entry.hash)
-            for queued in outbox.queue(notices, settings.notices, state.archive, (entry.seq, entry.hash)):
-                transaction.append(queued)
+            state.queue(transaction, notices, (entry.seq, entry.hash))
 
     def _tell(self, state: State, what: str, reason: str, now: datetime) -> None:
         """Queue a notice of a trouble, unless it was told today."""
@@ -185,12 +181,11 @@ class Watch:
         if (today, what, reason) in self.troubles:
             return
         head = state.ledger.head()
-        notices: list[Notice] = compose_trouble(
+        notices = compose_trouble(
             settings.site, what, reason, today, settings.notices.nightly_note, head.seq, head.hash
         )
         with state.ledger.transaction(now) as transaction:
-            for queued in outbox.queue(notices, settings.notices, state.archive, (head.seq, head.hash)):
-                transaction.append(queued)
+            state.queue(transaction, notices, (head.seq, head.hash))
         self.troubles.add((today, what, reason))
 
 

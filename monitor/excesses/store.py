@@ -20,7 +20,6 @@ CREATE TABLE excess (
     worst_on TEXT NOT NULL, worst_value REAL NOT NULL, worst_distance REAL NOT NULL, level REAL NOT NULL,
     cured_on TEXT, cured_by TEXT, cured_value REAL, void_reason TEXT
 ) STRICT;
-CREATE INDEX excess_state ON excess (state);
 """
 COLUMNS = (
     "id, rule, subject, kind, book, side, unit, currency, owner, state, opened_on, opened_value, last_on, last_value,"

@@ -15,7 +15,7 @@ from monitor.feed.holdings import collect_holdings, describe, latest_nav
 from monitor.feed.known import Known
 from monitor.feed.lacking import what_is_lacking
 from monitor.words import Recipe
-from monitor.world import Days, Firm, Holdings, Instrument, Past, Scope, Terms, World
+from monitor.world import Firm, Holdings, Instrument, Past, Scope, Terms, World
 
 
 @dataclass(frozen=True)
@@ -49,7 +49,7 @@ def build(recipe: Recipe, sources: Sources) -> World:
     past = {name: _renumbered(own, before, names) for name, (before, own) in earlier.items()}
     own_calendars = _own_calendars(instruments, (holdings, *past.values()), firm)
     calendars = main | {name: sources.sessions(name) for name in set(own_calendars)}
-    spans = {name: _newest(main[name].up_to(recipe.window_to), terms.longest_window + 1) for name in main}
+    spans = {name: main[name].up_to(recipe.window_to)[-(terms.longest_window + 1) :] for name in main}
     grid = make_grid(
         first=min(span[0].item() for span in spans.values()),
         last=max(recipe.prices_on, recipe.window_to),
@@ -111,10 +111,6 @@ def _own_calendars(instruments: Sequence[Instrument], held: Sequence[Holdings], 
         for at, book in zip(holdings.instrument.tolist(), holdings.book.tolist(), strict=True):
             holder.setdefault(at, book)
     return tuple(item.calendar or firm.books[holder[at]].calendar for at, item in enumerate(instruments))
-
-
-def _newest(days: Days, count: int) -> Days:
-    return days[-min(count, len(days)) :]
 
 
 def _currencies(terms: Terms, instruments: Sequence[Instrument]) -> list[str]:

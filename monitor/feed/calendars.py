@@ -61,11 +61,6 @@ class Sessions:
         """Business days after one day up to and with another."""
         return len(self.up_to(until)) - len(self.up_to(after))
 
-    def between(self, first: date, last: date) -> list[date]:
-        """The sessions from one day to another, both included."""
-        past = self.up_to(last)
-        return [_date(day) for day in past[np.searchsorted(past, np.datetime64(first)) :]]
-
 
 def _date(day: np.datetime64) -> date:
     found: date = day.astype("datetime64[D]").item()
@@ -94,7 +89,7 @@ def from_library(calendar: str) -> Sessions:
     except exchange_calendars.errors.InvalidCalendarName:
         raise WrongUse(
             f"found the calendar {calendar!r}; expected the ISO 10383 code of an exchange that the package "
-            "exchange_calendars knows, as XDUB"
+            "exchange_calendars knows, as XDUB. Mend it in the site file"
         ) from None
     days = known.sessions.to_numpy().astype("datetime64[D]")
     return Sessions(calendar, days, _date(days[-1]))

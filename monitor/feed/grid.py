@@ -104,7 +104,6 @@ def cut_market(
         unknown=unknown,
         currencies=grid.currencies,
         rate=grid.rate[rate_row],
-        rate_on=_days(np.minimum(grid.rate_day[rate_row], on.toordinal())),
         rate_carried=grid.rate_day[rate_row] < last_session[firm_calendar],
     )
 

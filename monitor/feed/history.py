@@ -174,16 +174,19 @@ class History:
     def _rows(self, statement: str, values: Sequence[object] = ()) -> list[tuple[Any, ...]]:
         """Run one statement; its rows. Raises DuskcheckError when the disk or another process is in the way."""
         try:
-            return self._run(statement, values)
+            try:
+                return self._run(statement, values)
+            except sqlite3.Error as error:
+                if getattr(error, "sqlite_errorcode", sqlite3.SQLITE_CORRUPT) & 0xFF not in BROKEN:
+                    raise
+                self.close()
+                self._path.unlink(missing_ok=True)
+                return self._run(statement, values)
         except sqlite3.Error as error:
-            if getattr(error, "sqlite_errorcode", sqlite3.SQLITE_CORRUPT) & 0xFF not in BROKEN:
-                raise DuskcheckError(
-                    f"{self._path} cannot be used: {error}. It is a cache: check the disk's free space and "
-                    "permissions, or delete it, and run the command again"
-                ) from error
-        self.close()
-        self._path.unlink(missing_ok=True)
-        return self._run(statement, values)
+            raise DuskcheckError(
+                f"{self._path} cannot be used: {error}. It is a cache: check the disk's free space and "
+                "permissions, or delete it, and run the command again"
+            ) from error
 
     def _run(self, statement: str, values: Sequence[object]) -> list[tuple[Any, ...]]:
         if self._db is None:

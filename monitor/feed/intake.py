@@ -87,10 +87,10 @@ def take(
         known = seen.get((file.name, file.size, file.changed))
         if known is not None and decided.stands(file.name, identity, known):
             continue
-        data, trouble = _read(file)
-        sha256 = hashlib.sha256(data).hexdigest() if data is not None else None
+        data = _read(file)
+        sha256 = hashlib.sha256(data).hexdigest() if isinstance(data, bytes) else None
         if not decided.stands(file.name, identity, sha256):
-            taken = _decide(file, name, data, trouble, put, words)
+            taken = _decide(file, name, data, put, words)
             currency_of.update((item.id, item.currency) for item in taken.instruments)
             yield taken
         elif sha256 is not None:
@@ -109,26 +109,21 @@ def _recordable(name: str) -> str:
     return os.fsencode(name).decode("utf-8", "replace")
 
 
-def _read(file: Lying) -> tuple[bytes | None, Finding | None]:
+def _read(file: Lying) -> bytes | Finding:
     if not file.regular:
-        return None, Finding(file.name, None, None, "a folder, link or special file", "a regular file")
+        return Finding(file.name, None, None, "a folder, link or special file", "a regular file")
     try:
-        return file.path.read_bytes(), None
+        return file.path.read_bytes()
     except OSError as error:
         found = f"a file that cannot be read ({error.strerror})"
-        return None, Finding(file.name, None, None, found, "a readable file", "Check its owner and permissions.")
+        return Finding(file.name, None, None, found, "a readable file", "Check its owner and permissions.")
 
 
 def _decide(
-    file: Lying,
-    name: Name | None,
-    data: bytes | None,
-    trouble: Finding | None,
-    put: Callable[[bytes], str],
-    words: Vocabulary,
+    file: Lying, name: Name | None, data: bytes | Finding, put: Callable[[bytes], str], words: Vocabulary
 ) -> Taken:
-    if data is None:
-        return Taken(file, _refusal(file, name, None, (trouble,) if trouble else ()))
+    if isinstance(data, Finding):
+        return Taken(file, _refusal(file, name, None, (data,)))
     if name is None:
         return Taken(file, _refusal(file, None, put(data), (_unnamed(file.name),)))
     parsed = parse(name.kind, file.name, data, name.day, words)

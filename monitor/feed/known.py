@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import sqlite3
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import date
 
@@ -13,7 +13,7 @@ from monitor.words import FileKind
 LATEST = 2**62  # a sequence after every entry
 TABLES = """
 CREATE TABLE accepted (
-    seq INTEGER PRIMARY KEY, name TEXT, kind TEXT, source TEXT, day TEXT, sha256 TEXT, first TEXT, last TEXT) STRICT;
+    seq INTEGER PRIMARY KEY, name TEXT, kind TEXT, source TEXT, day TEXT, sha256 TEXT) STRICT;
 CREATE INDEX accepted_identity ON accepted (kind, day, source, seq);
 CREATE TABLE refused (
     seq INTEGER PRIMARY KEY, name TEXT, kind TEXT, source TEXT, day TEXT, sha256 TEXT, reason TEXT) STRICT;
@@ -28,19 +28,13 @@ def record(index: sqlite3.Connection, entry: Entry) -> None:
     fact = entry.fact
     if isinstance(fact, FileAccepted):
         index.execute(
-            "INSERT INTO accepted VALUES (?, ?, ?, ?, ?, ?, ?, ?)",
-            (
-                entry.seq,
-                fact.name,
-                fact.file,
-                fact.source,
-                _text(fact.day),
-                fact.sha256,
-                *map(_text, (fact.first, fact.last)),
-            ),
+            "INSERT INTO accepted VALUES (?, ?, ?, ?, ?, ?)",
+            (entry.seq, fact.name, fact.file, fact.source, _text(fact.day), fact.sha256),
         )
     elif isinstance(fact, FileRefused):
         reason = str(fact.findings[0]) if fact.findings else "refused"
+        if fact.reasons > 1:
+            reason += f" (the first of {fact.reasons} reasons)"
         index.execute(
             "INSERT INTO refused VALUES (?, ?, ?, ?, ?, ?, ?)",
             (entry.seq, fact.name, fact.file, fact.source, _text(fact.day), fact.sha256, reason),
@@ -84,10 +78,6 @@ class Known:
         )
         return [reason for (reason,) in rows]
 
-    def all_files(self) -> Iterable[UsedFile]:
-        for kind in FileKind:
-            yield from self.files(kind)
-
 
 @dataclass(frozen=True)
 class Decisions:
@@ -120,6 +110,18 @@ def decisions(index: sqlite3.Connection) -> Decisions:
         {(kind, source, day): sha256 for kind, source, day, sha256, _ in accepted},
         dict(refused.fetchall()),
     )
+
+
+def accepted_after(index: sqlite3.Connection, seq: int) -> list[tuple[date | None, int]]:
+    """The dates of the files accepted after an entry, None for files without one, each with the newest such entry."""
+    rows = index.execute("SELECT day, MAX(seq) FROM accepted WHERE seq > ? GROUP BY day", (seq,))
+    return [(_day(day), newest) for day, newest in rows]
+
+
+def refused_between(index: sqlite3.Connection, after: int, upto: int) -> list[int]:
+    """The numbers of the entries after < seq <= upto that refused a file."""
+    rows = index.execute("SELECT seq FROM refused WHERE seq > ? AND seq <= ? ORDER BY seq", (after, upto))
+    return [seq for (seq,) in rows]
 
 
 def _day(text: str) -> date | None:

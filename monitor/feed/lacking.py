@@ -10,7 +10,7 @@ import numpy as np
 from monitor.feed.calendars import Sessions
 from monitor.feed.known import Known
 from monitor.words import FileKind
-from monitor.world import Firm, Holdings, Integers, Market, Rule, Scope, Terms
+from monitor.world import Firm, Holdings, Integers, Market, Scope, Terms
 
 NAMED = 5  # how many names a sentence lists before it only counts
 
@@ -32,7 +32,7 @@ def what_is_lacking(
     books = {firm.books[at].id for at in answered}
     money = {market.instruments[at].currency for at in held}
     money |= {firm.books[at].currency for at in np.unique(holdings.book[own])}
-    money |= {rule.currency for rule in terms.rules if rule.currency and _in_force(rule, day)}
+    money |= {rule.currency for rule in terms.rules if rule.currency and rule.in_force(day)}
     return (
         *known.refusals(day),
         *(reason for book, reason in holdings.missing.items() if book in books),
@@ -41,20 +41,16 @@ def what_is_lacking(
     )
 
 
-def _in_force(rule: Rule, day: date) -> bool:
-    return (rule.in_force_from or day) <= day <= (rule.in_force_to or day)
-
-
 def _prices(day: date, known: Known, held: Integers, market: Market) -> list[str]:
     stale = [market.instruments[at].id for at in held if market.carried[at] and not market.unknown[at]]
     unknown = [market.instruments[at].id for at in held if market.unknown[at]]
     told = []
     if stale and not known.of_day(FileKind.PRICES, day):
-        told.append(f"no accepted price file gives closes of {day}; {len(stale)} held instruments: {listed(stale)}")
+        told.append(f"no accepted price file gives closes of {day}; {_held(stale)}")
     elif stale:
-        told.append(f"no close of {day} for {len(stale)} held instruments: {listed(stale)}")
+        told.append(f"no usable close of {day} for {_held(stale)}")
     if unknown:
-        told.append(f"no instruments file describes {len(unknown)} held instruments: {listed(unknown)}")
+        told.append(f"no instruments file describes {_held(unknown)}")
     return told
 
 
@@ -69,6 +65,10 @@ def _rates(day: date, firm: Firm, needed: Set[str], market: Market, calendars: M
         session = calendars[firm.calendar].last(day)
         told.append(f"no FX rate of {session} for {listed(old)}; the last known ones count")
     return told
+
+
+def _held(names: Sequence[str]) -> str:
+    return f"{len(names)} held instrument{'' if len(names) == 1 else 's'}: {listed(names)}"
 
 
 def listed(names: Sequence[str]) -> str:

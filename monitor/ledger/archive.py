@@ -83,11 +83,6 @@ class Archive:
             except Damaged as damage:
                 yield sha, str(damage)
 
-    def check_all(self) -> Iterator[tuple[str, str]]:
-        """`check` of every blob that lies in the archive."""
-        found = (path.parent.name + path.stem for path in sorted(self.root.glob("[0-9a-f][0-9a-f]/*.gz")))
-        return self.check(sha for sha in found if SHA256.fullmatch(sha))
-
 
 def _write(path: Path, packed: bytes) -> None:
     temporary = path.with_name(f".{secrets.token_hex(8)}.new")

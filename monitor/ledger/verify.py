@@ -198,8 +198,8 @@ def _notes(reading: _Reading) -> Iterator[str]:
         )
     if reading.witness is None:
         yield (
-            "without a witness (the sequence and hash in an old notice) nobody can see from the ledger alone whether "
-            "its newest entries are lost or all of it was written anew"
+            "without a witness (--head with the number and hash in an old notice) nobody can see from the ledger alone "
+            "whether its newest entries are lost or all of it was written anew"
         )
     else:
         yield f"the head given bears witness up to entry {reading.witness.seq}; a loss of later entries cannot be seen"

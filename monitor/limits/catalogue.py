@@ -38,13 +38,12 @@ LATER_MEASURES = (
 class Measure:
     """One measure.
 
-    noun: its name inside a sentence. meaning: what it is, in one sentence. units: those a rule may use.
+    noun: its name inside a sentence. units: those a rule may use.
     position_units: those for `each: position`; none means that the measure says nothing of a single position.
     """
 
     name: str
     noun: str
-    meaning: str
     units: tuple[Unit, ...]
     position_units: tuple[Unit, ...]
     parameters: type[Parameters] = Parameters
@@ -54,77 +53,18 @@ class Measure:
 
 
 _ALL = (
-    Measure("gross", "gross exposure", "The sum of the absolute exposures of all positions.", LOSS_UNITS, LOSS_UNITS),
-    Measure("net", "net exposure", "The sum of the signed exposures of all positions.", LOSS_UNITS, LOSS_UNITS),
-    Measure("long", "long exposure", "The sum of the exposures above zero.", LOSS_UNITS, LOSS_UNITS),
-    Measure(
-        "short",
-        "short exposure",
-        "The size of the exposures below zero, never negative.",
-        LOSS_UNITS,
-        LOSS_UNITS,
-    ),
-    Measure("count", "number of positions", "How many positions there are.", (Unit.NUMBER,), ()),
-    Measure(
-        "leverage",
-        "leverage",
-        "Gross exposure over NAV, without cash in the own currency.",
-        (Unit.RATIO,),
-        (),
-    ),
-    Measure(
-        "weight",
-        "weight",
-        "The absolute exposures of the subject over net asset value or gross exposure.",
-        (Unit.OF_NAV, Unit.OF_GROSS),
-        (Unit.OF_NAV, Unit.OF_GROSS),
-    ),
-    Measure(
-        "largest_weight",
-        "largest weight of an instrument",
-        "The weight of the instrument whose exposure, netted over the books, is the largest in size.",
-        (Unit.OF_NAV, Unit.OF_GROSS),
-        (),
-    ),
-    Measure(
-        "volatility",
-        "annualised volatility",
-        "The standard deviation of the P&L, or of a position's returns as a ratio, annualised.",
-        LOSS_UNITS,
-        (*LOSS_UNITS, Unit.RATIO),
-        VolatilityParameters,
-    ),
-    Measure(
-        "value_at_risk",
-        "value at risk",
-        "The loss that is not passed with the given confidence over the horizon; not the worst case.",
-        LOSS_UNITS,
-        LOSS_UNITS,
-        TailParameters,
-    ),
-    Measure(
-        "expected_shortfall",
-        "expected shortfall",
-        "The mean of the losses beyond the value at risk of the same confidence.",
-        LOSS_UNITS,
-        LOSS_UNITS,
-        TailParameters,
-    ),
-    Measure(
-        "loss_probability",
-        "probability of a loss",
-        "The probability of a loss above the threshold over the horizon.",
-        (Unit.RATIO,),
-        (Unit.RATIO,),
-        LossProbabilityParameters,
-    ),
-    Measure(
-        "day_loss",
-        "loss of the day",
-        "The loss that the positions held before made on the session just ended; a gain is negative.",
-        LOSS_UNITS,
-        LOSS_UNITS,
-        DayLossParameters,
-    ),
+    Measure("gross", "gross exposure", LOSS_UNITS, LOSS_UNITS),
+    Measure("net", "net exposure", LOSS_UNITS, LOSS_UNITS),
+    Measure("long", "long exposure", LOSS_UNITS, LOSS_UNITS),
+    Measure("short", "short exposure", LOSS_UNITS, LOSS_UNITS),
+    Measure("count", "number of positions", (Unit.NUMBER,), ()),
+    Measure("leverage", "leverage", (Unit.RATIO,), ()),
+    Measure("weight", "weight", (Unit.OF_NAV, Unit.OF_GROSS), (Unit.OF_NAV, Unit.OF_GROSS)),
+    Measure("largest_weight", "largest weight of an instrument", (Unit.OF_NAV, Unit.OF_GROSS), ()),
+    Measure("volatility", "annualised volatility", LOSS_UNITS, (*LOSS_UNITS, Unit.RATIO), VolatilityParameters),
+    Measure("value_at_risk", "value at risk", LOSS_UNITS, LOSS_UNITS, TailParameters),
+    Measure("expected_shortfall", "expected shortfall", LOSS_UNITS, LOSS_UNITS, TailParameters),
+    Measure("loss_probability", "probability of a loss", (Unit.RATIO,), (Unit.RATIO,), LossProbabilityParameters),
+    Measure("day_loss", "loss of the day", LOSS_UNITS, LOSS_UNITS, DayLossParameters),
 )
 MEASURES: Mapping[str, Measure] = {measure.name: measure for measure in _ALL}

@@ -50,7 +50,7 @@ def figures_of_books(valuation: Valuation) -> Iterator[BookFigures]:
 def find_unmeasured(valuation: Valuation) -> Iterator[Unmeasured]:
     """The books of this round without positions, and the positions without an exposure or without a window."""
     world = valuation.world
-    window = int(str(world.terms.default_tail.parameters["window"]))
+    window: int = world.terms.default_tail.parameters["window"]
     for part in _wholes(valuation):
         book = part.members.subjects[0].book
         if book is None:

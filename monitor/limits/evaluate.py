@@ -105,11 +105,7 @@ def _answer(
 def _missing_book(rule: Rule, subject: Subject, world: World) -> str | None:
     """Why a subject that lies in, or reaches over, a book without positions cannot be measured."""
     missing = world.holdings.missing
-    return (
-        next((missing[book] for book in books_under(rule, subject, world) if book in missing), None)
-        if missing
-        else None
-    )
+    return next((missing[book] for book in books_under(rule, subject, world) if book in missing), None)
 
 
 def _held(rule: Rule, value: float | None) -> tuple[Standing, Side, float | None]:

@@ -291,7 +291,8 @@ def _leave_out_troubled(part: Slice, measured: Measured, troubles: Mapping[int, 
         found.setdefault(owner, []).append(troubles[position])
     for owner, reasons in found.items():
         distinct = list(dict.fromkeys(reasons))
-        more = f"; and {len(distinct) - 1} more positions" if len(distinct) > 1 else ""
+        others = len(distinct) - 1
+        more = f"; and {others} more position{'' if others == 1 else 's'}" if others else ""
         measured.leave_out(owner, distinct[0] + more)
 
 

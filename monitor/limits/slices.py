@@ -16,10 +16,10 @@ from monitor.limits.valuation import (
     Valuation,
     expired,
     foreign,
-    of_kind,
+    own_cash,
     position_currencies,
 )
-from monitor.words import InstrumentKind, Mark, MarkKind
+from monitor.words import Mark, MarkKind
 from monitor.world import Booleans, Floats, Integers, Rule, World
 
 NAMED = 3  # how many instruments a reason or a mark lists before it only counts
@@ -57,11 +57,10 @@ class Slice:
         """(positions,) in the slice's currency; zero where unknown: `exposure_troubles` names those."""
         return np.nan_to_num(self.valuation.exposure(self.currency))
 
-    @cached_property
+    @property
     def own_cash(self) -> Booleans:
-        """(positions,) cash in the slice's currency, which cannot lose."""
-        holdings = self.world.holdings
-        return of_kind(self.world, holdings, InstrumentKind.CASH) & ~foreign(self.world, holdings, self.currency)
+        """(positions,) cash in the slice's currency."""
+        return own_cash(self.world, self.world.holdings, self.currency)
 
     def scenarios(self, window: int) -> Scenarios:
         """The newest sessions of the calendar's window, `window` at most."""

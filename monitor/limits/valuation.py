@@ -75,7 +75,7 @@ class Valuation:
             world, window = self.world, self.world.windows[calendar]
             pnl, relative = _pnl(world, world.holdings, window, currency, world.market.close, world.market.rate)
             lacks = ~np.isfinite(pnl) | _gaps(world, world.holdings, window, currency)[:, 1:]
-            riskless = of_kind(world, world.holdings, InstrumentKind.CASH) & ~foreign(world, world.holdings, currency)
+            riskless = own_cash(world, world.holdings, currency)
             self._scenarios[key] = Scenarios(np.where(np.isfinite(pnl), pnl, 0.0), lacks, riskless, relative)
         return self._scenarios[key]
 
@@ -112,6 +112,11 @@ def of_kind(world: World, holdings: Holdings, kind: InstrumentKind) -> Booleans:
     """(positions,) of a kind."""
     found = np.array([item.kind is kind for item in world.market.instruments], dtype=np.bool_)
     return found[holdings.instrument]
+
+
+def own_cash(world: World, holdings: Holdings, currency: str) -> Booleans:
+    """(positions,) cash in this very currency, which cannot lose."""
+    return of_kind(world, holdings, InstrumentKind.CASH) & ~foreign(world, holdings, currency)
 
 
 def expired(world: World, holdings: Holdings) -> Booleans:

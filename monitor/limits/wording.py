@@ -9,7 +9,8 @@ from monitor.limits.catalogue import MEASURES
 from monitor.words import Unit
 from monitor.world import Rule, Selector
 
-_SHARES = {Unit.OF_NAV: " of NAV", Unit.OF_GROSS: " of gross exposure"}
+_SHARES = {Unit.OF_NAV: "NAV", Unit.OF_GROSS: "gross exposure"}
+_SUBJECTS = "the subject's "
 _METHODS = {
     "historical": "historical simulation",
     "normal": "normal distribution",
@@ -27,7 +28,7 @@ def sentence(rule: Rule) -> str:
 
 def made_title(rule: Rule) -> str:
     """A title for a rule that has none."""
-    text = f"{MEASURES[rule.measure.name].noun} {_whose(rule).rstrip(',')}: {_limits(rule)}"
+    text = f"{MEASURES[rule.measure.name].noun} {_whose(rule).rstrip(',')}: {_limits(rule)}{_unit(rule)}"
     return text[0].upper() + text[1:]
 
 
@@ -59,7 +60,10 @@ def _parts(rule: Rule) -> Mapping[str, str]:
         "each": rule.each or "one subject",
         "measure": rule.measure.name + _parameters(rule),
         "unit": rule.unit + (f" in {rule.currency}" if rule.currency else ""),
-        **{key.replace("_", " "): "none" if level is None else amount(rule, level) for key, level in levels.items()},
+        **{
+            key.replace("_", " "): "none" if level is None else _figure(rule, level) + _unit(rule)
+            for key, level in levels.items()
+        },
         "class": rule.kind or "none",
         "owner": rule.owner or "nobody",
         "told": ", ".join(rule.tell),
@@ -74,17 +78,45 @@ def _subject(rule: Rule) -> str:
 
 def _demand(rule: Rule) -> str:
     sides = ((rule.near_below, "down"), (rule.near, "up"))
-    near = [f"{amount(rule, level)} {way}" for level, way in sides if level is not None]
-    return f"must be {_limits(rule)}" + (f" (near from {' or from '.join(near)})" if near else "")
+    near = [f"{_figure(rule, level)} {way}" for level, way in sides if level is not None]
+    return f"must be {_limits(rule)}{_unit(rule, _owner(rule))}" + (
+        f" (near from {' or from '.join(near)})" if near else ""
+    )
 
 
 def _limits(rule: Rule) -> str:
     said = []
     if rule.limit_below is not None:
-        said.append(f"at least {amount(rule, rule.limit_below)}")
+        said.append(f"at least {_figure(rule, rule.limit_below)}")
     if rule.limit is not None:
-        said.append(f"at most {amount(rule, rule.limit)}")
+        said.append(f"at most {_figure(rule, rule.limit)}")
     return " and ".join(said)
+
+
+def _figure(rule: Rule, level: float) -> str:
+    exact = Decimal(repr(level))
+    if rule.unit in _SHARES or (rule.unit is Unit.RATIO and rule.measure.name != "leverage"):
+        return percent(exact)
+    return f"{exact:,f}".removesuffix(".0")
+
+
+def _unit(rule: Rule, owner: str = "") -> str:
+    """The unit after a figure. owner: whose NAV, gross exposure or currency it is."""
+    if rule.unit in _SHARES:
+        return f" of {owner}{_SHARES[rule.unit]}"
+    if rule.unit is Unit.AMOUNT:
+        return f" {rule.currency}" if rule.currency else f" in {owner or _SUBJECTS}currency"
+    return ""
+
+
+def _owner(rule: Rule) -> str:
+    """Whose NAV, gross exposure or currency; empty where the rule alone does not say how many books are left."""
+    if rule.each in ("position", "book"):
+        return "its book's "
+    books = next((item for item in rule.applies_to if item.tag == "book" and item.values is not None), None)
+    if books is None or (len(books.values or ()) > 1 and not books.negated):
+        return "the firm's "
+    return "" if books.negated else "the book's "
 
 
 def _whose(rule: Rule) -> str:
@@ -117,9 +149,9 @@ def _parameters(rule: Rule) -> str:
         share = given["of"]
         threshold = Decimal(repr(given["threshold"]))
         size = (
-            f"{percent(threshold)}{_SHARES[Unit(f'of_{share}')]}"
+            f"{percent(threshold)} of {_owner(rule)}{_SHARES[Unit(f'of_{share}')]}"
             if share
-            else f"{threshold.normalize():,f} in the subject's currency"
+            else f"{threshold.normalize():,f} in {_owner(rule) or _SUBJECTS}currency"
         )
         said.append(f"above {size}")
     method = given.get("method")
@@ -138,19 +170,6 @@ def _parameters(rule: Rule) -> str:
     if "basis" in given:
         said.append(f"{given['basis']} P&L")
     return f" ({', '.join(said)})" if said else ""
-
-
-def amount(rule: Rule, level: float) -> str:
-    """A level with its unit."""
-    exact = Decimal(repr(level))
-    if rule.unit in _SHARES:
-        return percent(exact) + _SHARES[rule.unit]
-    if rule.unit is Unit.RATIO and rule.measure.name != "leverage":
-        return percent(exact)
-    text = f"{exact:,f}".removesuffix(".0")
-    if rule.unit is Unit.AMOUNT:
-        return f"{text} {rule.currency}" if rule.currency else f"{text} in the subject's currency"
-    return text
 
 
 def percent(fraction: object) -> str:

@@ -58,7 +58,7 @@ def compose_summary(news: SummaryNews) -> list[Notice]:
                     Section(
                         f"Evenings over or incomplete ({len(not_quiet):,}), newest first",
                         table=table(
-                            ("evening", "outcome", "over", "near", "unmeasured", "lacking"),
+                            ("evening", "outcome", "over", "near", "unmeasured", "reasons"),
                             [_evening_row(evening) for evening in reversed(not_quiet)],
                         ),
                     ),
@@ -198,5 +198,5 @@ def _evening_row(evening: PastEvening) -> tuple[str, ...]:
         evening.outcome.value,
         *(f"{evening.counts.get(standing.value, 0):,}" for standing in (Standing.OVER, Standing.NEAR)),
         f"{evening.counts.get(Standing.UNMEASURED.value, 0):,}",
-        "; ".join(evening.lacking),
+        "; ".join(evening.reasons),
     )

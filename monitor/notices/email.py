@@ -58,7 +58,8 @@ def _faults() -> Iterator[None]:
     except smtplib.SMTPAuthenticationError as error:
         raise Retry(f"the server refused the login ({error.smtp_code})", unreachable=True) from None
     except smtplib.SMTPNotSupportedError as error:
-        raise Retry(f"the server cannot do what the site file asks: {error}", unreachable=True) from None
+        what = f"{str(error).rstrip('.')}; the channel's tls is starttls (the default), implicit or none"
+        raise Retry(f"the server cannot do what the site file asks: {what}", unreachable=True) from None
     except smtplib.SMTPRecipientsRefused as error:
         code, text = next(iter(error.recipients.values()))
         raise _refusal("the receiver", code, text) from None

@@ -133,6 +133,11 @@ def count(number: int, one: str, many: str = "") -> str:
     return f"{number:,} {one if number == 1 else many or one + 's'}"
 
 
+def not_measured(number: int) -> str:
+    """How many positions and books have no figure; a rule for a subject is not among them."""
+    return f"{count(number, 'position or book', 'positions or books')} not measured"
+
+
 def day(on: date | None) -> str:
     return "no date" if on is None else on.isoformat()
 

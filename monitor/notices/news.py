@@ -49,13 +49,13 @@ class EveningNews:
 
 @dataclass(frozen=True)
 class PastEvening:
-    """One of the old evenings of a summary. `lacking`: what had not come, in words."""
+    """One of the old evenings of a summary. `reasons`: why it is incomplete, in words."""
 
     day: date
     round: str
     outcome: Outcome
     counts: Mapping[str, int]
-    lacking: tuple[str, ...] = ()
+    reasons: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True)

@@ -102,7 +102,7 @@ def cause_sections(news: EveningNews) -> tuple[Section, ...]:
     standings = news.standings
     sections = []
     if standings.lacking:
-        sections.append(Section("Expected and not there", lines=standings.lacking))
+        sections.append(Section("Lacking", lines=standings.lacking))
     if news.refused:
         sections.append(Section("Files refused", lines=tuple(_refused_lines(news.refused))))
     if causes := unmeasured_by_reason(standings):

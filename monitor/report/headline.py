@@ -13,14 +13,19 @@ ORDER = (Standing.OVER, Standing.NEAR, Standing.UNMEASURED, Standing.WITHIN)
 
 
 def headline(standings: Standings, rules: Mapping[str, Rule]) -> str:
-    """How many are over, near and unmeasured, and which is worst; an evening that lacks something says so first."""
+    """How many are over, near and unmeasured, and which is worst; an incomplete evening says so first, and why last."""
     if not standings.answers:
         sentence = "no rule was asked tonight, so nothing was held against a limit"
     else:
         sentence = f"{_counted(standings)}{_worst(standings, rules)}"
     if standings.outcome is Outcome.INCOMPLETE:
-        return f"Incomplete: {sentence}."
+        return f"Incomplete: {sentence}{_amiss(standings)}."
     return f"{sentence[0].upper()}{sentence[1:]}."
+
+
+def _amiss(standings: Standings) -> str:
+    lacking = f"; {figures.count(len(standings.lacking), 'item')} lacking" if standings.lacking else ""
+    return lacking + (f"; {figures.not_measured(len(standings.unmeasured))}" if standings.unmeasured else "")
 
 
 def by_urgency(answers: tuple[Answer, ...]) -> list[Answer]:

@@ -18,7 +18,6 @@ from pathlib import Path
 
 from demo_feed import story
 from monitor import evenings
-from monitor.daemon.schedule import moment
 from monitor.demonstration import set_up
 from monitor.evening import check_evening
 from monitor.feed.build import build
@@ -37,7 +36,7 @@ def measure(folder: Path, count: int) -> tuple[list[float], list[float]]:
             for name, data in evening.files.items():
                 (site.drop / name).write_bytes(data)
             round_ = site.settings.rounds[0]
-            now = moment(round_, evening.date, round_.at)
+            now = round_.moment(evening.date, round_.at)
             start = time.perf_counter()
             terms = prepare(state, now)
             for due in evenings_between(state, terms, evening.date, evening.date, None):

@@ -22,6 +22,11 @@ from evening_scene import (
     write_site,
 )
 
+from monitor import evenings
+from monitor.site import open_site
+from monitor.state import open_state
+from monitor.words import DuskcheckError
+
 NOW = evening_of(SECOND)
 KINDS = ("prices", "positions", "nav")
 
@@ -45,11 +50,26 @@ def test_a_broken_file_makes_the_evening_incomplete_and_names_the_place(
 
     ended = duskcheck(NOW, "check", "--site", site, "--json")
 
-    assert (ended.code, ended.stderr) == (4, "")
+    assert ended.code == 4
+    assert ended.stderr.startswith(f"duskcheck: refused: {kind}_{SECOND}.csv") and lacks in ended.stderr
     (evening,) = documents(ended)
     assert evening["outcome"] == "incomplete"
     assert any(f"{kind}_{SECOND}.csv" in cause and lacks in cause for cause in evening["lacking"])
     assert any("INCOMPLETE" in title for _, _, _, title, _ in account(site)["notices"])
+
+
+def test_every_reason_of_a_refused_file_is_said_once(duskcheck: Commands, site: Path):
+    leave_files(site, SECOND)
+    leave(site, f"prices_{SECOND}.csv", "instrument,close\nQUAY,abc\nTIDE,x\n")
+    leave(site, f"price_{SECOND}.csv", "instrument,close\n")
+
+    first = duskcheck(NOW, "check", "--site", site)
+    again = duskcheck(NOW, "check", "--site", site)
+
+    said = [line.removeprefix("duskcheck: refused: ").split(": ")[0] for line in first.stderr.splitlines()]
+    assert sorted(said) == [f"price_{SECOND}.csv", f"prices_{SECOND}.csv:2:6", f"prices_{SECOND}.csv:3:6"]
+    assert "(the first of 2 reasons)" in " ".join(first.stdout.split())
+    assert again.stderr == ""
 
 
 @pytest.mark.parametrize("kind", ["prices", "positions"])
@@ -155,6 +175,29 @@ def test_wrong_use_of_check_exits_with_2(duskcheck: Commands, site: Path, argume
     assert_clear(ended)
 
 
+@pytest.mark.parametrize(
+    ("arguments", "said"),
+    [(["--from", "9999"], "found --from 9999; expected the number of an entry"), (["--kind", "evening"], "--kind")],
+)
+def test_wrong_use_of_ledger_show_exits_with_2(duskcheck: Commands, site: Path, arguments: list[str], said: str):
+    ended = duskcheck(NOW, "ledger", "show", "--site", site, *arguments)
+
+    assert (ended.code, ended.stdout) == (2, "")
+    assert said in ended.stderr
+
+
+def test_an_evening_incomplete_by_its_books_alone_says_why(duskcheck: Commands, site: Path):
+    site.write_text(site.read_text().replace("window: 30", "window: 400"))
+    leave_files(site, SECOND)
+
+    ended = duskcheck(NOW, "check", "--site", site)
+
+    text = " ".join(ended.stdout.split())
+    assert ended.code == 4
+    assert "positions or books not measured." in text
+    assert "not measured: harbour/QUAY: QUAY has" in text and "of the 400 returns of the window" in text
+
+
 @pytest.mark.parametrize("command", [["ledger", "show"], ["report"], ["excess", "list"]])
 def test_without_a_ledger_commands_that_read_it_fail_and_make_none(
     duskcheck: Commands, tmp_path: Path, command: list[str]
@@ -211,6 +254,22 @@ def test_a_lost_or_broken_cache_changes_no_answer(duskcheck: Commands, site: Pat
         ended = duskcheck(NOW, "check", "--site", site)
 
     assert (ended.code, ended.stderr) == (expected.code, "")
+    assert account(site) == record
+
+
+def test_an_index_that_breaks_while_it_is_asked_is_thrown_away_and_named(duskcheck: Commands, site: Path):
+    leave_files(site, SECOND)
+    assert duskcheck(NOW, "check", "--site", site).code == 0
+    record = account(site)
+    path = site.parent / "state" / "index.sqlite"
+
+    with pytest.raises(DuskcheckError, match=r"index\.sqlite was broken"), open_state(open_site(site)) as state:
+        index = state.index()
+        path.write_bytes(b"\xff" * path.stat().st_size)
+        evenings.all_editions(index)
+
+    assert not path.exists()
+    assert duskcheck(NOW, "check", "--site", site).code == 0
     assert account(site) == record
 
 

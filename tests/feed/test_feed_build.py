@@ -46,7 +46,7 @@ def test_a_missing_close_tonight_is_carried_and_told(site):
     assert (world.market.close[row], str(world.market.closed_on[row])) == (12, str(THURSDAY))
     assert world.market.carried.tolist() == [True, False]
     assert world.windows["XDUB"].gap[row].tolist() == [False, False, False, False, True]
-    assert world.lacking == (f"no close of {FRIDAY} for 1 held instruments: ALFA",)
+    assert world.lacking == (f"no usable close of {FRIDAY} for 1 held instrument: ALFA",)
 
 
 def test_a_missing_price_file_is_told_as_one_cause(site):
@@ -142,7 +142,7 @@ def test_an_unknown_instrument_is_named_and_told(site):
     world = site.world()
 
     assert world.market.unknown.tolist() == [item.id == "ODD" for item in world.market.instruments]
-    assert world.lacking == ("no instruments file describes 1 held instruments: ODD",)
+    assert world.lacking == ("no instruments file describes 1 held instrument: ODD",)
 
 
 def test_an_absent_book_is_missing_and_a_flat_one_is_flat(site):

@@ -15,17 +15,29 @@ from monitor.world import MeasureCall, Rule, Selector
 SENTENCES = [
     (
         {"near": "4000000", "limit": "5000000"},
-        "r: the gross exposure of the firm must be at most 5,000,000 in the subject's currency "
-        "(near from 4,000,000 in the subject's currency up).",
+        "r: the gross exposure of the firm must be at most 5,000,000 in the firm's currency (near from 4,000,000 up).",
     ),
     (
         {"applies_to": "{book: any}", "each": "issuer", "measure": "{name: weight}", "limit": "10 %", "unit": "of_nav"},
-        "r: the weight of each issuer must be at most 10 % of NAV.",
+        "r: the weight of each issuer must be at most 10 % of the firm's NAV.",
+    ),
+    (
+        {"applies_to": "{book: north-quay}", "each": "issuer", "near": "9 %", "limit": "10 %", "unit": "of_nav"},
+        "r: the gross exposure of each issuer, where book is north-quay, must be at most 10 % of the book's NAV "
+        "(near from 9 % up).",
+    ),
+    (
+        {"each": "position", "measure": "{name: weight}", "limit": "10 %", "unit": "of_nav"},
+        "r: the weight of each position must be at most 10 % of its book's NAV.",
+    ),
+    (
+        {"applies_to": "{book: {not: north-quay}}", "limit": "10 %", "unit": "of_nav"},
+        "r: the gross exposure of all positions where book is not north-quay must be at most 10 % of NAV.",
     ),
     (
         {"applies_to": "{book: north-quay}", "measure": "{name: value_at_risk, method: student_t, horizon_days: 20}"},
         "r: the value at risk (Student's t distribution, confidence 97.5 %, horizon 20 days, window 250 sessions, "
-        "drift zero) of book north-quay must be at most 5 in the subject's currency.",
+        "drift zero) of book north-quay must be at most 5 in the book's currency.",
     ),
     (
         {
@@ -45,9 +57,8 @@ SENTENCES = [
             "limit_below": "-5",
             "near": "4",
         },
-        "r: the gross exposure of each currency, where currency is not EUR, must be at least -5 in the subject's "
-        "currency and at most 5 in the subject's currency (near from -4 in the subject's currency down or from "
-        "4 in the subject's currency up).",
+        "r: the gross exposure of each currency, where currency is not EUR, must be at least -5 and at most 5 in "
+        "the firm's currency (near from -4 down or from 4 up).",
     ),
     (
         {
@@ -56,13 +67,13 @@ SENTENCES = [
             "unit": "ratio",
             "in_force": "{from: 2026-01-02, to: 2026-12-31}",
         },
-        "r: the probability of a loss (above 5 % of gross exposure, normal distribution, horizon 1 day, "
+        "r: the probability of a loss (above 5 % of the firm's gross exposure, normal distribution, horizon 1 day, "
         "window 250 sessions, drift as in the window) of the firm must be at most 0.5 %, from 2026-01-02, "
         "up to 2026-12-31.",
     ),
     (
         {"measure": "{name: loss_probability, threshold: 50000}", "limit": "1 %", "unit": "ratio", "each": "book"},
-        "r: the probability of a loss (above 50,000 in the subject's currency, normal distribution, horizon 1 day, "
+        "r: the probability of a loss (above 50,000 in its book's currency, normal distribution, horizon 1 day, "
         "window 250 sessions, drift zero) of each book must be at most 1 %.",
     ),
     (
@@ -76,7 +87,7 @@ SENTENCES = [
     ),
     (
         {"measure": "{name: day_loss}", "limit": "0.07 %", "unit": "of_gross"},
-        "r: the loss of the day (hypothetical P&L) of the firm must be at most 0.07 % of gross exposure.",
+        "r: the loss of the day (hypothetical P&L) of the firm must be at most 0.07 % of the firm's gross exposure.",
     ),
     (
         {"measure": "{name: count}", "limit": "40", "unit": ""},
@@ -111,7 +122,7 @@ def test_new_gone_and_changed_rules_are_told() -> None:
     new = replace(old, limit=1500000.0, tell=("board",))
 
     assert differences([old], [new, rule()]) == [
-        "new rule r: the gross exposure of the firm must be at most 5 in the subject's currency.",
+        "new rule r: the gross exposure of the firm must be at most 5 in the firm's currency.",
         "rule nq-var: limit was 1,250,000 in the subject's currency, is now 1,500,000 in the subject's currency",
         "rule nq-var: told was risk-desk, board, is now board",
     ]

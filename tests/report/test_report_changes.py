@@ -119,9 +119,16 @@ def test_the_headline(values: dict[str, float | None], sentence: str) -> None:
     assert headline(evening_of(**values), RULES) == sentence
 
 
-@pytest.mark.parametrize("gap", [{"lacking": ("nav",)}, {"unmeasured": (Unmeasured(FIRM, "why"),)}])
-def test_an_evening_with_a_gap_never_reads_as_all_well(gap: dict) -> None:
-    assert headline(replace(evening_of(a=0.5), **gap), RULES).startswith("Incomplete: the one standing is within")
+@pytest.mark.parametrize(
+    ("gap", "why"),
+    [
+        ({"lacking": ("nav",)}, "; 1 item lacking."),
+        ({"unmeasured": (Unmeasured(FIRM, "why"), Unmeasured(FIRM, "too"))}, "; 2 positions or books not measured."),
+    ],
+)
+def test_an_evening_with_a_gap_never_reads_as_all_well(gap: dict, why: str) -> None:
+    sentence = headline(replace(evening_of(a=0.5), **gap), RULES)
+    assert sentence.startswith("Incomplete: the one standing is within") and sentence.endswith(why)
 
 
 def test_what_is_over_without_a_utilisation_is_not_lost_behind_others() -> None:

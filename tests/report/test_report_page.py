@@ -100,7 +100,7 @@ def test_it_says_what_happened_and_what_it_rests_on(reading: Reading) -> None:
     said = reading.text
     for part in (
         "2026-03-12 · round europe · edition 1 · checked 2026-03-12 19:15 Europe/Dublin",
-        "Did not come tonight nav of cove-lane: nothing came by 19:00",
+        "Lacking tonight nav of cove-lane: nothing came by 19:00",
         "Excess opened 1 One-day 99 % VaR of the whole firm (the firm): EUR 2,004,120, allowed at most EUR 2,000,000",
         "Excess cured 1 Gross exposure at most twice the net assets (far-east), opened on 2026-03-09: its figure came",
         "EUR 1,301,000 to EUR 1,878,000 (95 % sampling bounds)",

@@ -106,7 +106,7 @@ def test_terms_hold_the_rounds_in_the_order_of_the_day() -> None:
 def test_round_is_due_in_its_own_zone() -> None:
     asia = read_site("site.yaml", FULL.encode()).rounds[1]
 
-    assert asia.instant(date(2026, 1, 15)).isoformat() == "2026-01-15T18:00:00+09:00"
+    assert asia.moment(date(2026, 1, 15), asia.at).isoformat() == "2026-01-15T18:00:00+09:00"
 
 
 @pytest.mark.parametrize(("at", "give_up"), [("00:10", time(3, 10)), ("20:59", time(23, 59)), ("22:30", time(23, 59))])
