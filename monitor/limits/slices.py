@@ -167,7 +167,7 @@ class Slice:
             gaps = made.lacks.sum(axis=1)[position] - before[owner]
             for at in np.flatnonzero(gaps > 0).tolist():
                 name = self.world.market.instruments[int(self.world.holdings.instrument[position[at]])].id
-                marks[owner[at]].append(Mark(MarkKind.GAPS, f"{name} without {int(gaps[at])} returns"))
+                marks[owner[at]].append(Mark(MarkKind.GAPS, f"{name} without {int(gaps[at])} of its returns"))
         return [shortened(own) for own in marks]
 
     @cached_property

@@ -60,7 +60,7 @@ def test_a_young_position_beside_an_old_one_counts_as_nothing_before_its_first_c
     answer = site.answers()["tail", "book:quay"]
 
     assert answer.n == 20
-    assert [(mark.kind, mark.note) for mark in answer.marks] == [(MarkKind.GAPS, "YOUNG without 1 returns")]
+    assert [(mark.kind, mark.note) for mark in answer.marks] == [(MarkKind.GAPS, "YOUNG without 1 of its returns")]
 
 
 def test_a_gap_counts_against_the_floor_and_the_move_comes_with_the_next_close(tmp_path):
@@ -75,7 +75,7 @@ def test_a_gap_counts_against_the_floor_and_the_move_comes_with_the_next_close(t
     assert made.pnl[0, 7] == pytest.approx(closes[-1] * (closes[8] / closes[6] - 1))
     assert made.lacks[0].tolist() == [at == 6 for at in range(20)]
     answer = site.answers()["tail", "book:quay"]
-    assert (answer.n, answer.marks[0].note) == (20, "ALFA without 1 returns")
+    assert (answer.n, answer.marks[0].note) == (20, "ALFA without 1 of its returns")
 
     closes[9] = None
     site.prices({"ALFA": closes}, LONG)
@@ -99,8 +99,8 @@ def test_a_missing_rate_inside_the_window_is_a_gap_of_what_is_held_in_that_curre
     gaps = {key[1]: [mark.note for mark in answer.marks] for key, answer in found.items()}
     assert gaps == {
         "position:quay/ALFA": [],
-        "position:quay/BETA": ["BETA without 1 returns"],
-        "position:quay/DOLLAR": ["DOLLAR without 1 returns"],
+        "position:quay/BETA": ["BETA without 1 of its returns"],
+        "position:quay/DOLLAR": ["DOLLAR without 1 of its returns"],
         "position:quay/FUTU": [],  # FX acts on its P&L at tonight's rate only
     }
 
