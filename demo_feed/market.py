@@ -1,5 +1,7 @@
 """Prices and rates of the invented markets: factors with fat tails and clusters of volatility, and what follows them.
 
+Within a day a price walks on at random between one close and the next, and its range is that of the walk.
+
 A return is beta x (world + region) + sector + own. Each of these series is a GARCH(1,1) process (Bollerslev 1986) with
 Student-t innovations of four degrees of freedom. Tokyo, which closes first, follows the world a session late in part.
 """
@@ -18,7 +20,7 @@ from demo_feed.sessions import is_session
 
 Floats = npt.NDArray[np.float64]
 
-SEED = 234
+SEED, SEED_OF_RANGES = 234, 235
 WORLD_DEVIATION = 0.0052
 REGION_DEVIATION = 0.0048
 SECTOR_DEVIATION = {"bonds": 0.0022, "metals": 0.0, "index": 0.0, "world": 0.0}  # 0.4 % where none stands here
@@ -26,6 +28,8 @@ DRIFT = 0.0001  # a day, for everything
 DRIFT_OF_BETA = 0.0002  # a day, on top, for each unit of beta
 TOKYO_LATE = 0.6
 SHOCK, MEMORY = 0.07, 0.91
+OVERNIGHT = 0.2  # of a day's variance, from the close before to the open
+CALMING = 0.9  # a day, of the variance within a day, towards that of the returns
 PAIRS = ("EURGBP", "EURJPY", "EURUSD")
 PAIR_START = (0.8520, 121.50, 1.1090)
 PAIR_DEVIATION = (0.0027, 0.0046, 0.0040)
@@ -37,12 +41,17 @@ class Panel:
     """close: (days, instruments) as printed, in the order of PRICED; open: whether its market had a session on the day.
 
     rate: (days, pairs) as printed, in the order of PAIRS. A close on a day that is not open is the last one before.
+    first, high, low: (days, instruments) the opening, highest and lowest price of the day; they mean nothing on a day
+    that is not open.
     """
 
     days: tuple[date, ...]
     close: Floats
     open: npt.NDArray[np.bool_]
     rate: Floats
+    first: Floats
+    high: Floats
+    low: Floats
 
 
 def make_panel(days: tuple[date, ...], world_moves: Mapping[date, float]) -> Panel:
@@ -78,8 +87,38 @@ def make_panel(days: tuple[date, ...], world_moves: Mapping[date, float]) -> Pan
     start = np.array([instrument.price for instrument in PRICED])
     rate = np.array(PAIR_START) * np.exp(np.cumsum(pair, axis=0))
     is_open = np.array([[is_session(instrument.calendar, day) for instrument in PRICED] for day in days])
-    close = np.round(start * np.exp(np.cumsum(returns, axis=0)), 2)
-    return Panel(days, _carried(close, is_open), is_open, np.round(rate, 4))
+    close = _carried(np.round(start * np.exp(np.cumsum(returns, axis=0)), 2), is_open)
+    return Panel(days, close, is_open, np.round(rate, 4), *_ranges(close, is_open))
+
+
+def _ranges(close: Floats, is_open: npt.NDArray[np.bool_]) -> tuple[Floats, Floats, Floats]:
+    """Opening, highest and lowest prices, as printed: the log price is a Brownian bridge from close to close.
+
+    The highest and the lowest point of a bridge are drawn by inverting their distributions, each by itself:
+    P(max > m) = exp(-2 (m - a) (m - b) / v) from a to b with variance v.
+    """
+    random = np.random.RandomState(SEED_OF_RANGES)
+    normal = random.standard_normal(close.shape)
+    chances = 1.0 - random.random_sample((2, *close.shape))  # above 0, so that their logarithms are finite
+    returns = np.diff(np.log(close), axis=0, prepend=np.log(close[:1]))
+    variance = _calming(returns, is_open)
+    gap = OVERNIGHT * returns + np.sqrt(OVERNIGHT * (1 - OVERNIGHT) * variance) * normal
+    rest = returns - gap
+    up, down = (np.sqrt(rest**2 - 2 * (1 - OVERNIGHT) * variance * np.log(chance)) for chance in chances)
+    first = close * np.exp(-rest)
+    high, low = np.round(first * np.exp((rest + up) / 2), 2), np.round(first * np.exp((rest - down) / 2), 2)
+    first = np.round(first, 2)
+    return first, np.maximum(high, np.maximum(first, close)), np.minimum(low, np.minimum(first, close))
+
+
+def _calming(returns: Floats, is_open: npt.NDArray[np.bool_]) -> Floats:
+    """(days, instruments) the variance of a day: an exponential mean of squared returns, the day's own the newest."""
+    variances: Floats = np.empty_like(returns)
+    variance = np.mean(returns**2, axis=0)
+    for at, (day, traded) in enumerate(zip(returns, is_open, strict=True)):
+        variance = np.where(traded, CALMING * variance + (1 - CALMING) * day**2, variance)
+        variances[at] = variance
+    return variances
 
 
 def _follow(returns: Floats, own: Floats, pair: Floats) -> None:

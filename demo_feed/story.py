@@ -28,6 +28,7 @@ class Event:
 
     trades: done that evening. world_move: the world's return that day, as a fraction. no_prices: the prices file never
     arrives. lost_book: the positions file has no row of it. broken_nav: a figure in the nav file cannot be read.
+    no_pnl: the file of the books' own P&L never arrives.
     """
 
     date: date
@@ -37,6 +38,7 @@ class Event:
     no_prices: bool = False
     lost_book: str | None = None
     broken_nav: bool = False
+    no_pnl: bool = False
 
 
 @dataclass(frozen=True)
@@ -136,6 +138,11 @@ EVENTS = (
         trades=(Order("north-quay", "KESTERMANN", 0.045), Order("western", "KESTERMANN-DR", 0.045)),
     ),
     Event(
+        date(2025, 10, 21),
+        "The books' own P&L never arrives. No evening needs it; a backtest shows a day without it.",
+        no_pnl=True,
+    ),
+    Event(
         date(2025, 11, 10),
         "Western enlarges its positions by 29 %: its leverage is near its limit.",
         trades=(Resize("western", 1.29),),
@@ -184,12 +191,7 @@ def start_files() -> dict[str, bytes]:
     """What the firm starts with: instruments.csv, history.csv and history_fx.csv up to the day before the story."""
     panel = _panel()
     days = [day for day in panel.days if day < FIRST_EVENING]
-    closes = (
-        f"{day},{instrument.id},{close:.2f}"
-        for day, row, is_open in zip(days, panel.close.tolist(), panel.open.tolist(), strict=False)
-        for instrument, close, traded in zip(PRICED, row, is_open, strict=True)
-        if traded
-    )
+    closes = (f"{day},{row}" for at, day in enumerate(days) for row in _prices(panel, at))
     rates = (
         f"{day},{pair},{rate:.4f}"
         for day, row in zip(days, panel.rate.tolist(), strict=False)
@@ -197,7 +199,7 @@ def start_files() -> dict[str, bytes]:
     )
     return {
         "instruments.csv": _instruments(),
-        "history.csv": _csv("date,instrument,close", closes),
+        "history.csv": _csv("date,instrument,close,open,high,low", closes),
         "history_fx.csv": _csv("date,pair,rate", rates),
     }
 
@@ -233,11 +235,6 @@ def site_files() -> dict[str, bytes]:
 def _evening_files(panel: Panel, at: int, told: Sequence[Statement], events: Sequence[Event]) -> dict[str, bytes]:
     day = panel.days[at]
     lost = {event.lost_book for event in events}
-    prices = (
-        f"{instrument.id},{close:.2f}"
-        for instrument, close, traded in zip(PRICED, panel.close[at].tolist(), panel.open[at].tolist(), strict=True)
-        if traded
-    )
     positions = (
         f"{statement.book},{name},{quantity:.{2 if name.startswith('CASH-') else 0}f}"
         for statement in told
@@ -249,14 +246,31 @@ def _evening_files(panel: Panel, at: int, told: Sequence[Statement], events: Seq
     if any(event.broken_nav for event in events):
         navs[-1] = navs[-1].replace(".", ",", 1)
     files = {
-        f"prices_{day}.csv": _csv("instrument,close", prices),
+        f"prices_{day}.csv": _csv("instrument,close,open,high,low", _prices(panel, at)),
         f"positions_{day}.csv": _csv("book,instrument,quantity", positions),
         f"fx_{day}.csv": _csv("pair,rate", rates),
         f"nav_{day}.csv": _csv("book,nav,nav_date", navs),
     }
+    pnls = [
+        f"{statement.book},{statement.pnl.actual:.2f},{statement.pnl.fees:.2f},{statement.pnl.intraday:.2f}"
+        for statement in told
+        if statement.pnl
+    ]
+    if pnls and not any(event.no_pnl for event in events):
+        files[f"pnl_{day}.csv"] = _csv("book,actual,fees,intraday", pnls)
     if any(event.no_prices for event in events):
         del files[f"prices_{day}.csv"]
     return files
+
+
+def _prices(panel: Panel, at: int) -> list[str]:
+    """The rows of a day: instrument, close, open, high, low, of those whose market was open."""
+    columns = (panel.open, panel.close, panel.first, panel.high, panel.low)
+    return [
+        ",".join([instrument.id, *(f"{price:.2f}" for price in prices)])
+        for instrument, traded, *prices in zip(PRICED, *(column[at].tolist() for column in columns), strict=True)
+        if traded
+    ]
 
 
 def _instruments() -> bytes:

@@ -1,7 +1,8 @@
 """What the books hold: targets, the small trades of every day, the orders of the story, and the net asset value.
 
-Trades are done at the evening's closes and cost nothing. A future's daily gain goes to cash and its exposure is no
-part of the net asset value, which is the worth of everything else.
+Trades are booked at the evening's closes and cost nothing. A future's daily gain goes to cash and its exposure is no
+part of the net asset value, which is the worth of everything else. What trades really gained until the close, and what
+they cost, is settled apart from the book: it is part of the P&L that the book states, and not of its net asset value.
 """
 
 from __future__ import annotations
@@ -16,9 +17,11 @@ from demo_feed.instruments import CASH, PRICED
 from demo_feed.market import PAIRS, Panel
 from demo_feed.sessions import is_session
 
-SEED = 19
+SEED, SEED_OF_DEALING = 19, 20
 SHARE_TRADED = 0.25
 NOISE = 0.0012
+DEALT_APART = 0.004  # standard deviation of (close / price dealt at) - 1
+FEE = 0.0005  # of what was traded
 BY_ID = {instrument.id: instrument for instrument in (*PRICED, *CASH)}
 COLUMN = {instrument.id: column for column, instrument in enumerate(PRICED)}
 
@@ -51,24 +54,45 @@ class Resize:
     factor: float
 
 
+@dataclass(frozen=True)
+class Pnl:
+    """What a book made from its session before, in its currency, rounded to cents.
+
+    held: by what it held overnight. intraday: by the trades of the day until the close. fees: what they cost.
+    """
+
+    held: float
+    intraday: float
+    fees: float
+
+    @property
+    def actual(self) -> float:
+        return self.held + self.intraday - self.fees
+
+
 @dataclass
 class Account:
-    """A book while its year runs. `cash` is that in the book's own currency."""
+    """A book while its year runs. `cash` is that in the book's own currency; `nav` that of its session before."""
 
     book: Book
     targets: dict[str, float]
     cash: float
     quantity: dict[str, float] = field(default_factory=dict)
+    nav: float = 0.0
 
 
 @dataclass(frozen=True)
 class Statement:
-    """A book on one evening: quantities by instrument, cash included, and the net asset value in its currency."""
+    """A book on one evening: quantities by instrument, cash included, and the net asset value in its currency.
+
+    pnl: None on its first evening, which has no session before.
+    """
 
     day: date
     book: str
     quantity: Mapping[str, float]
     nav: float
+    pnl: Pnl | None
 
 
 BOOKS = (
@@ -160,7 +184,7 @@ BOOKS = (
 
 def statements(panel: Panel, first: date, orders: Mapping[date, tuple[Order | Resize, ...]]) -> Iterator[Statement]:
     """Every book on each of its sessions from `first` on, in the order of days. Orders need an open market."""
-    random = np.random.RandomState(SEED)
+    random, dealing = np.random.RandomState(SEED), np.random.RandomState(SEED_OF_DEALING)
     accounts = [Account(book, dict(book.targets), book.start) for book in BOOKS]
     before: dict[str, int] = {}
     for at, day in enumerate(panel.days):
@@ -173,6 +197,7 @@ def statements(panel: Panel, first: date, orders: Mapping[date, tuple[Order | Re
                 account.cash += _futures_gain(account, panel, before[book.id], at, value)
             before[book.id] = at
             nav = _nav(account, value)
+            held_before = dict(account.quantity)
             tradable = [name for name in account.targets if name in COLUMN and panel.open[at, COLUMN[name]]]
             if not account.quantity:
                 for name in account.targets:
@@ -182,9 +207,25 @@ def statements(panel: Panel, first: date, orders: Mapping[date, tuple[Order | Re
             for order in orders.get(day, ()):
                 if order.book == book.id:
                     _carry_out(account, order, tradable, nav, value)
+            pnl = _pnl(account, held_before, nav, value, dealing) if held_before else None
+            account.nav = nav
             held = {name: quantity for name, quantity in account.quantity.items() if quantity}
             held[f"CASH-{book.currency}"] = round(account.cash, 2)
-            yield Statement(day, book.id, held, round(_nav(account, value), 2))
+            yield Statement(day, book.id, held, round(_nav(account, value), 2), pnl)
+
+
+def _pnl(
+    account: Account, before: Mapping[str, float], nav: float, value: Mapping[str, float], random: np.random.RandomState
+) -> Pnl:
+    """before: quantities ahead of the day's trades. nav: after the day's closes, which trades at closes do not move."""
+    names = [name for name in sorted(account.quantity) if account.quantity[name] != before.get(name, 0.0)]
+    traded = np.array([(account.quantity[name] - before.get(name, 0.0)) * value[name] for name in names])
+    gained = traded @ (DEALT_APART * random.standard_normal(len(names)))
+    return Pnl(
+        held=round(nav - account.nav, 2),
+        intraday=round(float(gained), 2),
+        fees=round(FEE * float(np.abs(traded).sum()), 2),
+    )
 
 
 def _unit_values(panel: Panel, at: int, currency: str) -> dict[str, float]:

@@ -21,7 +21,7 @@ from monitor.feed import intake
 from monitor.feed.build import build
 from monitor.feed.digest import digest_inputs
 from monitor.feed.kinds import Vocabulary
-from monitor.feed.known import Known
+from monitor.feed.known import HINDSIGHT, Known
 from monitor.limits.evaluate import evaluate
 from monitor.news import evening_news
 from monitor.notices.compose import compose
@@ -130,9 +130,10 @@ def _settle(state: State, index: sqlite3.Connection, tonight: Evening, recipe: R
 
 
 def _files_of(known: Known) -> tuple[UsedFile, ...]:
-    """The files of the evening's date, and those that have none."""
+    """The files of the evening's date, and those that have none, as far as evenings rest on them."""
+    kinds = [kind for kind in FileKind if kind is not HINDSIGHT]
     return tuple(
-        file for kind in FileKind for file in known.files(kind, since=known.until) if file.day in (None, known.until)
+        file for kind in kinds for file in known.files(kind, since=known.until) if file.day in (None, known.until)
     )
 
 

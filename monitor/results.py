@@ -14,7 +14,7 @@ from typing import Any
 from monitor.words import Mark, MarkKind, Side, Standing, Subject, SubjectKind, Unit
 from monitor.world import Answer, BookFigures, How, Standings, Unmeasured
 
-FORMAT = 1
+FORMAT = 2  # 1 had no `unbounded` and no `detail` of a method; it is read as it stands
 
 
 def encode(standings: Standings) -> bytes:
@@ -35,7 +35,7 @@ def encode(standings: Standings) -> bytes:
 def decode(data: bytes) -> Standings:
     """The standings of a results file. Raises ValueError for a format this program does not know."""
     content = json.loads(data)
-    if content["format"] != FORMAT:
+    if content["format"] not in (1, FORMAT):
         raise ValueError(f"results of format {content['format']}; this program knows {FORMAT}")
     return Standings(
         answers=tuple(_read_answer(row) for row in _rows(content["answers"])),
@@ -73,6 +73,7 @@ def _answer(answer: Answer) -> dict[str, Any]:
         "utilisation": answer.utilisation,
         "low": answer.low,
         "high": answer.high,
+        "unbounded": answer.unbounded,
         "n": answer.n,
         "reason": answer.reason,
         "marks": [[mark.kind.value, mark.note] for mark in answer.marks],
@@ -97,6 +98,7 @@ def _read_answer(row: Mapping[str, Any]) -> Answer:
         utilisation=row["utilisation"],
         low=row["low"],
         high=row["high"],
+        unbounded=row.get("unbounded"),
         n=row["n"],
         reason=row["reason"],
         marks=tuple(Mark(MarkKind(kind), note) for kind, note in row["marks"]),
@@ -150,9 +152,9 @@ def _read_subject(parts: Sequence[Any]) -> Subject:
 
 def _how(how: How) -> list[Any]:
     confidence = None if how.confidence is None else str(how.confidence)
-    return [how.method, confidence, how.horizon_days, how.window, how.of]
+    return [how.method, confidence, how.horizon_days, how.window, how.of, how.detail]
 
 
 def _read_how(parts: Sequence[Any]) -> How:
-    method, confidence, horizon_days, window, of = parts
-    return How(method, None if confidence is None else Decimal(confidence), horizon_days, window, of)
+    method, confidence, horizon_days, window, of, *detail = parts
+    return How(method, None if confidence is None else Decimal(confidence), horizon_days, window, of, *detail)

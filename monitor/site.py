@@ -12,14 +12,15 @@ from monitor.daemon.settings import Round, one_round, read_rounds
 from monitor.feed.settings import read_books, read_patterns
 from monitor.limits.context import RuleContext
 from monitor.limits.defaults import Defaults
-from monitor.limits.parameters import default_tail
+from monitor.limits.parameters import RANGE_METHODS, default_tail
+from monitor.limits.record import read_record
 from monitor.notices.settings import NoticeSettings, read_notices
 from monitor.reading.document import Document
 from monitor.reading.fields import Calendar, Currency, FilePath, Line, Zone
 from monitor.reading.plain import read_yaml
 from monitor.reading.shapes import Shape
 from monitor.words import FileKind, Finding, WrongUse
-from monitor.world import Book, Firm, Rule, Terms
+from monitor.world import Book, Firm, RecordTerms, Rule, Terms
 
 LATER_KEYS = {
     "proxies": "proxies of instruments",
@@ -62,6 +63,7 @@ class SiteShape(Shape):
     tell: object = None
     files: object = None
     defaults: object = None
+    backtest: object = None
     nightly_note: object = None
     heads: FilePath | None = None
 
@@ -84,6 +86,7 @@ class SiteSettings:
     notices: NoticeSettings
     patterns: Mapping[FileKind, str]
     defaults: Defaults
+    record: RecordTerms
     heads: str | None
 
     def firm(self) -> Firm:
@@ -105,6 +108,8 @@ class SiteSettings:
             days_a_year=self.defaults.days_a_year,
             nav_age=self.defaults.nav_age,
             default_tail=tail,
+            record=self.record,
+            needs_ranges=any(rule.measure.parameters.get("method") in RANGE_METHODS for rule in rules),
         )
 
     def rule_context(self) -> RuleContext:
@@ -164,6 +169,7 @@ def read_site(name: str, data: bytes) -> SiteSettings:
     rounds = read_rounds(document, book_ids)
     notices = read_notices(document)
     patterns = read_patterns(document)
+    record = read_record(document, defaults)
     _check_folders(document, paths)
     if document.findings or shape is None:
         raise WrongUse(findings=document.report())
@@ -180,6 +186,7 @@ def read_site(name: str, data: bytes) -> SiteSettings:
         notices=notices,
         patterns=patterns,
         defaults=defaults,
+        record=record,
         heads=shape.heads,
     )
 

@@ -40,6 +40,7 @@ class FileKind(StrEnum):
     FX = "fx"
     INSTRUMENTS = "instruments"
     NAV = "nav"
+    PNL = "pnl"
     HISTORY = "history"
     HISTORY_FX = "history_fx"
 

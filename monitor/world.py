@@ -102,12 +102,40 @@ class Market:
 
 
 @dataclass(frozen=True)
+class ActualPnl:
+    """What a book says it made on one date, in its own currency; negative is a loss.
+
+    actual: with the day's trades, after fees. fees: what of it was paid in fees and commissions, above zero for a cost.
+    intraday: what of it came from the day's trades. None where the book does not say. A P&L without fees, as rules of
+    supervision ask for, is actual + fees.
+    """
+
+    actual: float
+    fees: float | None
+    intraday: float | None
+
+
+@dataclass(frozen=True)
+class Ranges:
+    """What the price files say of each session itself: (instruments, n + 1), NaN where not given, and never carried.
+
+    open, high, low: above zero, low <= open, close <= high wherever two of them are given. close: as given beside them.
+    """
+
+    open: Floats
+    high: Floats
+    low: Floats
+    close: Floats
+
+
+@dataclass(frozen=True)
 class Window:
     """The sessions of one calendar up to the evening, with a close and a rate on each.
 
     sessions: (n + 1,) dates, ascending. close: (instruments, n + 1), carried over days without one.
     rate: (currencies, n + 1), carried likewise. gap: (instruments, n + 1) no close although the instrument's own market
-    was open. rate_gap: (currencies, n + 1) no rate although the firm's calendar had a session.
+    was open. rate_gap: (currencies, n + 1) no rate although the firm's calendar had a session. ranges: None unless a
+    rule needs them.
     """
 
     calendar: str
@@ -116,6 +144,7 @@ class Window:
     rate: Floats
     gap: Booleans
     rate_gap: Booleans
+    ranges: Ranges | None = None
 
 
 @dataclass(frozen=True)
@@ -171,11 +200,25 @@ class Rule:
 
 
 @dataclass(frozen=True)
+class RecordTerms:
+    """How the record of the loss model is judged. challenger: the method that stands beside a rule's own.
+
+    missing_counts: a day without P&L or VaR is an exception. pnl: `hypothetical`, `actual`, or `larger`, which counts
+    the exceptions of both and takes the larger count.
+    """
+
+    challenger: MeasureCall | None
+    missing_counts: bool
+    pnl: str
+
+
+@dataclass(frozen=True)
 class Terms:
     """What was signed, as a recipe's `rules` hash names it: the firm, its rounds and its rules.
 
     rounds: books by round, in the order of the day. longest_window: the most sessions that a rule or a page asks for.
-    nav_age: business days that a NAV may be old. default_tail: the measure that pages show of every book.
+    nav_age: business days that a NAV may be old. default_tail: the measure that pages show of every book. needs_ranges:
+    whether a rule looks at opening, highest and lowest prices.
     """
 
     firm: Firm
@@ -185,6 +228,8 @@ class Terms:
     days_a_year: int
     nav_age: int
     default_tail: MeasureCall
+    record: RecordTerms
+    needs_ranges: bool
 
 
 @dataclass(frozen=True)
@@ -223,13 +268,15 @@ class How:
     horizon_days: int | None = None
     window: int | None = None
     of: str | None = None
+    detail: str | None = None  # what else the method was told, in words
 
 
 @dataclass(frozen=True)
 class Answer:
     """Tonight's standing of one rule for one subject, with everything a reader needs to believe it.
 
-    value is None exactly when standing is `unmeasured`, and then reason says why. low and high are sampling bounds.
+    value is None exactly when standing is `unmeasured`, and then reason says why. low and high are sampling bounds at
+    95 %; `unbounded` says why one of them is None where the measure has such bounds at all.
     utilisation is None unless value and level are both positive.
     """
 
@@ -248,6 +295,7 @@ class Answer:
     utilisation: float | None
     low: float | None
     high: float | None
+    unbounded: str | None
     n: int | None
     reason: str | None
     marks: tuple[Mark, ...]

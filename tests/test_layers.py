@@ -18,7 +18,7 @@ LAYERS = (
     {"risk"},
     {"limits", "feed", "excesses", "ledger"},
     {"notices", "report"},
-    {"site", "evenings", "settle", "state", "amend", "adoption", "news", "paging", "replay", "evening"},
+    {"site", "evenings", "settle", "state", "amend", "adoption", "news", "paging", "replay", "backtest", "evening"},
     {"run", "demonstration"},
     {"cli", "daemon"},
 )

@@ -14,6 +14,7 @@ from monitor.words import DuskcheckError, Exit
 TRACE = "DUSKCHECK_TRACE"
 # Each command lives in the module of its name and is loaded when it is called: loading all of them takes a second.
 COMMANDS = {
+    "backtest": "How the loss model has done against what happened.",
     "check": "An evening now, or several in order.",
     "daemon": "Evenings on schedule, until told to stop.",
     "demo": "Set up the invented firm and run a year of its evenings.",

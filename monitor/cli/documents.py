@@ -53,6 +53,7 @@ def _standing(answer: Answer, excess: Excess | None) -> dict[str, Any]:
         "standing": answer.standing,
         "low": answer.low,
         "high": answer.high,
+        "unbounded": answer.unbounded,
         "n": answer.n,
         "reason": answer.reason,
         "marks": [{"mark": mark.kind, "note": mark.note} for mark in answer.marks],
@@ -62,6 +63,7 @@ def _standing(answer: Answer, excess: Excess | None) -> dict[str, Any]:
         "confidence": None if how.confidence is None else str(how.confidence),
         "horizon_days": how.horizon_days,
         "window": how.window,
+        "detail": how.detail,
     }
 
 

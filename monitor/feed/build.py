@@ -58,6 +58,7 @@ def build(recipe: Recipe, sources: Sources) -> World:
         instruments=instruments,
         currencies=_currencies(terms, instruments),
         base=firm.base_currency,
+        needs_ranges=terms.needs_ranges,
     )
     scope = _scope(recipe, terms, main)
     market = cut_market(recipe.prices_on, instruments, unknown, calendars, own_calendars, firm.calendar, grid)

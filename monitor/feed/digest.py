@@ -54,6 +54,9 @@ def digest_inputs(world: World) -> str:
         for array in (window.rate, window.rate_gap):
             add(array[currencies])
         add(window.sessions)
+        if window.ranges is not None:
+            for array in (window.ranges.open, window.ranges.high, window.ranges.low, window.ranges.close):
+                add(array[instruments])
     navs = [(firm.books[at].id, world.nav[firm.books[at].id]) for at in books]
     add([[book, nav.value, str(nav.on), nav.reason] for book, nav in navs])
     return digest.hexdigest()

@@ -14,7 +14,7 @@ from monitor.feed.history import History
 from monitor.feed.known import Known
 from monitor.feed.rates import worth
 from monitor.words import FileKind, InstrumentKind
-from monitor.world import Booleans, Days, Floats, Instrument, Integers, Market, Window
+from monitor.world import Booleans, Days, Floats, Instrument, Integers, Market, Ranges, Window
 
 LOOK_BACK = timedelta(days=20)  # far enough before a window to find the close that its first session carries
 EPOCH = date(1970, 1, 1).toordinal()
@@ -26,7 +26,8 @@ class Grid:
 
     Days are ordinals, ascending; a source day of 0 means that nothing is known yet. The first row of each lies before
     everything known, so that any date finds a row. given: (days, instruments) a file gave a close for that very day.
-    cash: (instruments,) whose close is always 1, and which no file of prices names.
+    cash: (instruments,) whose close is always 1, and which no file of prices names. ranges: (3, days, instruments) of
+    open, high and low as given, not carried; None unless a rule needs them.
     """
 
     cash: Booleans
@@ -38,6 +39,7 @@ class Grid:
     currencies: tuple[str, ...]
     rate: Floats
     rate_day: Integers
+    ranges: Floats | None
 
 
 def make_grid(
@@ -48,18 +50,22 @@ def make_grid(
     instruments: Sequence[Instrument],
     currencies: Sequence[str],
     base: str,
+    needs_ranges: bool,
 ) -> Grid:
     """Everything known from LOOK_BACK before `first` up to `last`. currencies: sorted."""
     since = first - LOOK_BACK
     cash = _of_kind(instruments, InstrumentKind.CASH)
-    days, names, values = history.matrix(_files(known, FileKind.HISTORY, FileKind.PRICES, since), since, last)
+    files = _files(known, FileKind.HISTORY, FileKind.PRICES, since)
+    days, names, values = history.matrix(files, since, last)
     days, closes = _after_nothing(days, _closes_of(instruments, names, values))
     close, close_day = _carry(days, closes)
     close[:, cash] = 1.0
+    ranges = history.ranges(files, days, [instrument.id for instrument in instruments]) if needs_ranges else None
     rate_days, pairs, rates = history.matrix(_files(known, FileKind.HISTORY_FX, FileKind.FX, since), since, last)
     rate_days, rates = _after_nothing(rate_days, rates)
     rate, rate_day = worth(*_carry(rate_days, rates), pairs, currencies, base)
-    return Grid(cash, days, ~np.isnan(closes), close, close_day, rate_days, tuple(currencies), rate.T, rate_day.T)
+    given = ~np.isnan(closes)
+    return Grid(cash, days, given, close, close_day, rate_days, tuple(currencies), rate.T, rate_day.T, ranges)
 
 
 def cut_window(
@@ -78,7 +84,14 @@ def cut_window(
     given_today = grid.given[rows] & (grid.days[rows] == ordinals)[:, None]
     gap = opened & ~given_today.T & ~grid.cash[:, None]
     rate_gap = own[firm_calendar].open_on_each(sessions) & (ordinals > grid.rate_day[rate_rows].T)
-    return Window(calendar, sessions, grid.close[rows].T.copy(), grid.rate[rate_rows].T.copy(), gap, rate_gap)
+    ranges = _cut_ranges(grid.ranges, grid.close, rows, given_today & ~grid.cash) if grid.ranges is not None else None
+    return Window(calendar, sessions, grid.close[rows].T.copy(), grid.rate[rate_rows].T.copy(), gap, rate_gap, ranges)
+
+
+def _cut_ranges(ranges: Floats, close: Floats, rows: Integers, given: Booleans) -> Ranges:
+    """given: (sessions, instruments) a close that counts was given on the session itself."""
+    opening, high, low, last = (np.where(given, prices[rows], np.nan).T.copy() for prices in (*ranges, close))
+    return Ranges(open=opening, high=high, low=low, close=last)
 
 
 def cut_market(

@@ -1,7 +1,8 @@
 """The cache of prices, rates and sessions: history.sqlite. Deletable at any time; rebuilt from the archive.
 
-One checked float64 blob a file, so that a file is kept in one write and a window read without parsing. Lists of names
-are kept once, for those of one day and the next are mostly the same.
+One checked float64 blob a file, so that a file is kept in one write and a window read without parsing; opening, highest
+and lowest prices in a blob of their own, which is read only when they are asked for. Lists of names are kept once, for
+those of one day and the next are mostly the same.
 """
 
 from __future__ import annotations
@@ -9,6 +10,7 @@ from __future__ import annotations
 import sqlite3
 import zlib
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 from datetime import date
 from pathlib import Path
 from typing import Any
@@ -18,15 +20,16 @@ import numpy as np
 from monitor.facts import UsedFile
 from monitor.feed import calendars
 from monitor.feed.calendars import Sessions
-from monitor.feed.kinds import Panel, Parsed, Vocabulary, parse
+from monitor.feed.kinds import RANGE_FIELDS, Panel, Parsed, Vocabulary, parse
 from monitor.words import DuskcheckError, FileKind
 from monitor.world import Floats, Integers
 
-FORMAT = 2
+FORMAT = 3
 TABLES = """
 CREATE TABLE names (id INTEGER PRIMARY KEY, joined TEXT UNIQUE NOT NULL) STRICT;
 CREATE TABLE panel (
-    sha256 TEXT, day TEXT, names INTEGER, days BLOB, closes BLOB, sum INTEGER, PRIMARY KEY (sha256, day)) STRICT;
+    sha256 TEXT, day TEXT, names INTEGER, days BLOB, closes BLOB, sum INTEGER, ranges BLOB, ranges_sum INTEGER,
+    PRIMARY KEY (sha256, day)) STRICT;
 CREATE TABLE sessions (
     calendar TEXT, version TEXT, ends TEXT, days BLOB, sum INTEGER, PRIMARY KEY (calendar, version)) STRICT;
 CREATE TABLE seen (name TEXT PRIMARY KEY, size INTEGER, changed INTEGER, sha256 TEXT) STRICT, WITHOUT ROWID;
@@ -46,6 +49,7 @@ class History:
         self._read = read
         self._db: sqlite3.Connection | None = None
         self._panels: dict[tuple[str, date | None], Panel] = {}
+        self._ranges: dict[tuple[str, date | None], Floats | None] = {}
         self._lists: dict[str, tuple[str, ...]] = {}
         self._parsed: dict[tuple[FileKind, str, date | None], Parsed] = {}
         self._sessions: dict[str, Sessions] = {}
@@ -102,9 +106,11 @@ class History:
         """An accepted file that is not a panel, parsed."""
         key = (file.file, file.sha256, file.day)
         if key not in self._parsed:
-            data = self._read(file.sha256)
-            self._parsed[key] = parse(file.file, file.file.value, data, file.day, Vocabulary())
+            self._parsed[key] = self._parse(file)
         return self._parsed[key]
+
+    def _parse(self, file: UsedFile) -> Parsed:
+        return parse(file.file, file.file.value, self._read(file.sha256), file.day, Vocabulary())
 
     def keep(self, sha256: str, day: date | None, panel: Panel) -> None:
         """Store the panel of a file just accepted. day: the date in its name."""
@@ -112,17 +118,20 @@ class History:
         joined = "\n".join(panel.names)
         days = np.array(panel.days, dtype="<i8").tobytes()
         closes = panel.values.astype("<f8").tobytes()
+        ranges = None if panel.ranges is None else panel.ranges.astype("<f8").tobytes()
+        total = _sum(sha256, on, joined, days, closes)
         self._rows("INSERT OR IGNORE INTO names (joined) VALUES (?)", (joined,))
         self._rows(
-            "INSERT OR REPLACE INTO panel SELECT ?, ?, id, ?, ?, ? FROM names WHERE joined = ?",
-            (sha256, on, days, closes, _sum(sha256, on, joined, days, closes), joined),
+            "INSERT OR REPLACE INTO panel SELECT ?, ?, id, ?, ?, ?, ?, ? FROM names WHERE joined = ?",
+            (sha256, on, days, closes, total, ranges, _sum(str(total), ranges or b""), joined),
         )
 
     def panel(self, file: UsedFile) -> Panel:
-        """The values of an accepted file of prices or rates."""
+        """The values of an accepted file of prices or rates, without ranges."""
         key = (file.sha256, file.day)
         if key not in self._panels:
-            self._panels[key] = self._stored_panel(file.sha256, str(file.day or "")) or self._parse_panel(file)
+            stored = self._stored_panel(file.sha256, str(file.day or ""))
+            self._panels[key] = stored or replace(self._parse_panel(file), ranges=None)
         return self._panels[key]
 
     def _stored_panel(self, sha256: str, on: str) -> Panel | None:
@@ -142,11 +151,27 @@ class History:
         return Panel(tuple(days.tolist()), names, closes.reshape(len(days), len(names)))
 
     def _parse_panel(self, file: UsedFile) -> Panel:
-        content = self.parsed(file).content
+        content = self._parse(file).content
         if not isinstance(content, Panel):
             raise TypeError(f"{file.file} is not a file of prices or rates")
         self.keep(file.sha256, file.day, content)
         return content
+
+    def _ranges_of(self, file: UsedFile) -> Floats | None:
+        """(3, days, names) beside the panel of a file; None when it has none."""
+        key = (file.sha256, file.day)
+        if key not in self._ranges:
+            self._ranges[key] = self._read_ranges(file, str(file.day or ""), self.panel(file))
+        return self._ranges[key]
+
+    def _read_ranges(self, file: UsedFile, on: str, panel: Panel) -> Floats | None:
+        for beside, ranges, total in self._rows(
+            "SELECT sum, ranges, ranges_sum FROM panel WHERE sha256 = ? AND day = ?", (file.sha256, on)
+        ):
+            if _sum(str(beside), ranges or b"") == total:
+                shape = (len(RANGE_FIELDS), *panel.values.shape)
+                return np.frombuffer(ranges, dtype="<f8").reshape(shape) if ranges else None
+        return self._parse_panel(file).ranges
 
     def matrix(self, files: Sequence[UsedFile], first: date, last: date) -> tuple[Integers, tuple[str, ...], Floats]:
         """All values from one day to another, later files outranking earlier ones name by name.
@@ -170,6 +195,29 @@ class History:
             target = np.ix_(rows, columns[panel.names])
             values[target] = np.where(np.isnan(block), values[target], block)
         return days, names, values
+
+    def ranges(self, files: Sequence[UsedFile], days: Integers, names: Sequence[str]) -> Floats:
+        """The prices of RANGE_FIELDS beside the closes of `matrix`: (3, days, names), NaN where there is none.
+
+        They come from the very file whose close counts: a later file that gives a close alone leaves none of them.
+        """
+        place = {name: at for at, name in enumerate(names)}
+        found = np.full((len(RANGE_FIELDS), len(days), len(names)), np.nan)
+        chosen: dict[tuple[str, ...], tuple[Integers, Integers]] = {}
+        for file in files:
+            panel, ranges = self.panel(file), self._ranges_of(file)
+            if panel.names not in chosen:
+                source = np.array([at for at, name in enumerate(panel.names) if name in place], dtype=np.int64)
+                chosen[panel.names] = source, np.array([place[panel.names[at]] for at in source], dtype=np.int64)
+            source, columns = chosen[panel.names]
+            own = np.array(panel.days, dtype=np.int64)
+            inside = np.flatnonzero(np.isin(own, days))
+            picked, target = np.ix_(inside, source), np.ix_(np.searchsorted(days, own[inside]), columns)
+            closed = ~np.isnan(panel.values[picked])
+            for at, field in enumerate(found):
+                block = np.nan if ranges is None else ranges[at][picked]
+                field[target] = np.where(closed, block, field[target])
+        return found
 
     def _rows(self, statement: str, values: Sequence[object] = ()) -> list[tuple[Any, ...]]:
         """Run one statement; its rows. Raises DuskcheckError when the disk or another process is in the way."""

@@ -1,4 +1,4 @@
-"""Who holds what on a date, and what each book is worth: from the files of positions and of net asset values."""
+"""Who holds what on a date, what each book is worth and what it says it made: from the files of the books."""
 
 from __future__ import annotations
 
@@ -10,10 +10,10 @@ import numpy as np
 from monitor.facts import UsedFile
 from monitor.feed.calendars import Sessions
 from monitor.feed.history import History
-from monitor.feed.kinds import NavRow, PositionRows
+from monitor.feed.kinds import NavRow, PnlRow, PositionRows
 from monitor.feed.known import Known
 from monitor.words import FileKind
-from monitor.world import Book, Firm, Holdings, Instrument, Nav
+from monitor.world import ActualPnl, Book, Firm, Holdings, Instrument, Nav
 
 
 def collect_holdings(
@@ -92,6 +92,24 @@ def latest_nav(
 def _nav_rows(file: UsedFile, history: History) -> tuple[NavRow, ...]:
     content = history.parsed(file).content
     return tuple(row for row in content if isinstance(row, NavRow)) if isinstance(content, tuple) else ()
+
+
+def actual_pnl(known: Known, history: History, first: date, last: date) -> dict[tuple[str, date], ActualPnl]:
+    """What each book says it made on the dates from first to last, by book and date; absent where no file says it.
+
+    Of the files for one date the one accepted last counts, whole: a book that it does not name has no P&L then.
+    """
+    return {
+        (row.book, file.day): ActualPnl(row.actual, row.fees, row.intraday)
+        for file in known.files(FileKind.PNL, since=first)
+        if file.day is not None and file.day <= last
+        for row in _pnl_rows(file, history)
+    }
+
+
+def _pnl_rows(file: UsedFile, history: History) -> tuple[PnlRow, ...]:
+    content = history.parsed(file).content
+    return tuple(row for row in content if isinstance(row, PnlRow)) if isinstance(content, tuple) else ()
 
 
 def describe(known: Known, history: History) -> dict[str, Instrument]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from datetime import date
@@ -14,15 +15,20 @@ from monitor.words import FileKind, Finding, InstrumentKind, did_you_mean
 from monitor.world import Floats, Instrument
 
 LATER_KINDS = ("bond_price", "external")
+RANGE_FIELDS = ("open", "high", "low")
 
 
 @dataclass(frozen=True)
 class Panel:
-    """Values by day and name. days: ordinals, ascending. values: (days, names), NaN where a name has none."""
+    """Values by day and name. days: ordinals, ascending. values: (days, names), NaN where a name has none.
+
+    ranges: (3, days, names) the prices of RANGE_FIELDS beside closes, NaN where not given; None when the file has none.
+    """
 
     days: tuple[int, ...]
     names: tuple[str, ...]
     values: Floats
+    ranges: Floats | None = None
 
 
 @dataclass(frozen=True)
@@ -47,6 +53,14 @@ class NavRow:
 
 
 @dataclass(frozen=True)
+class PnlRow:
+    book: str
+    actual: float
+    fees: float | None
+    intraday: float | None
+
+
+@dataclass(frozen=True)
 class Vocabulary:
     """The names that a site knows, against which new files are held. None: the file was held against them before."""
 
@@ -54,6 +68,10 @@ class Vocabulary:
     currencies: frozenset[str] | None = None
     knows_calendar: Callable[[str], bool] | None = None
     currency_of: Mapping[str, str] = field(default_factory=dict)
+
+    @property
+    def held_before(self) -> bool:
+        return self.books is None
 
     def has_currency(self, code: str) -> bool:
         return self.currencies is None or code in self.currencies
@@ -63,7 +81,7 @@ class Vocabulary:
 class Parsed:
     """A file that can be taken: its content, the number of its rows and the dates they cover."""
 
-    content: Panel | PositionRows | tuple[NavRow, ...] | tuple[Instrument, ...]
+    content: Panel | PositionRows | tuple[NavRow, ...] | tuple[PnlRow, ...] | tuple[Instrument, ...]
     rows: int
     first: date | None
     last: date | None
@@ -87,13 +105,51 @@ def _refused(table: Table) -> Parsed:
 def _prices(table: Table, day: date | None, words: Vocabulary) -> Parsed:
     names = table.names("instrument")
     closes = table.numbers("close")
-    for column in ("open", "high", "low", "volume"):
-        if table.has(column):
-            table.numbers(column, empty=0.0)
+    ranges = _ranges(table, closes, words)
+    if table.has("volume"):
+        table.numbers("volume", empty=0.0)
     if table.has("currency"):
         _own_currencies(table, names, words)
     table.once([(name,) for name in names], "instrument")
-    return _one_day(day, names, closes)
+    return _one_day(day, names, closes, ranges)
+
+
+def _ranges(table: Table, closes: Sequence[float], words: Vocabulary) -> Floats | None:
+    """(3, rows) of RANGE_FIELDS, NaN in empty cells; None when there is nothing in any.
+
+    A file that was taken by an edition which did not look at these columns stays taken: in a row that would be refused
+    now, nothing counts as given.
+    """
+    if not any(table.has(column) for column in RANGE_FIELDS):
+        return None
+    already = len(table.findings)
+    ranges = np.full((len(RANGE_FIELDS), len(closes)), np.nan)
+    for place, column in enumerate(RANGE_FIELDS):
+        if table.has(column):
+            ranges[place] = table.numbers(column, empty=math.nan)
+            for at in np.flatnonzero(ranges[place] <= 0).tolist():
+                found = f"the {column} {table.texts(column)[at]}"
+                table.wrong(at, column, found, "a number above zero", "Leave the cell empty where there is none.")
+                ranges[place, at] = np.nan
+    _check_order(table, ranges, closes)
+    if words.held_before:
+        lines = {finding.line for finding in table.findings[already:]}
+        del table.findings[already:]
+        ranges[:, [at for at, line in enumerate(table.lines) if line in lines]] = np.nan
+    return None if np.isnan(ranges).all() else ranges
+
+
+def _check_order(table: Table, ranges: Floats, closes: Sequence[float]) -> None:
+    """No open and no close lies below the low or above the high of its row."""
+    opening, high, low = ranges
+    for column, bound, beyond, side, expected in (
+        ("high", high, np.greater, "below", "a high at or above open and close"),
+        ("low", low, np.less, "above", "a low at or below open and close"),
+    ):
+        for other, prices in (("open", opening), ("close", np.array(closes))):
+            for at in np.flatnonzero(beyond(prices, bound)).tolist():
+                found = f"the {column} {table.texts(column)[at]} {side} the {other} {table.texts(other)[at]}"
+                table.wrong(at, column, found, expected)
 
 
 def _fx(table: Table, day: date | None, words: Vocabulary) -> Parsed:
@@ -102,15 +158,18 @@ def _fx(table: Table, day: date | None, words: Vocabulary) -> Parsed:
     return _one_day(day, pairs, rates)
 
 
-def _one_day(day: date | None, names: Sequence[str], values: Sequence[float]) -> Parsed:
+def _one_day(day: date | None, names: Sequence[str], values: Sequence[float], ranges: Floats | None = None) -> Parsed:
     if day is None:
         raise ValueError("a daily file has a date in its name")
-    panel = Panel((day.toordinal(),), tuple(names), np.array([values], dtype=np.float64).reshape(1, len(names)))
+    row = np.array([values], dtype=np.float64).reshape(1, len(names))
+    panel = Panel((day.toordinal(),), tuple(names), row, None if ranges is None else ranges[:, None, :])
     return Parsed(panel, len(names), day, day)
 
 
-def _history(table: Table, _day: date | None, _words: Vocabulary) -> Parsed:
-    return _long(table, "instrument", table.names("instrument"), table.numbers("close"))
+def _history(table: Table, _day: date | None, words: Vocabulary) -> Parsed:
+    names = table.names("instrument")
+    closes = table.numbers("close")
+    return _long(table, "instrument", names, closes, _ranges(table, closes, words))
 
 
 def _history_fx(table: Table, _day: date | None, words: Vocabulary) -> Parsed:
@@ -118,7 +177,7 @@ def _history_fx(table: Table, _day: date | None, words: Vocabulary) -> Parsed:
     return _long(table, "pair", pairs, rates)
 
 
-def _long(table: Table, column: str, names: list[str], values: list[float]) -> Parsed:
+def _long(table: Table, column: str, names: list[str], values: list[float], ranges: Floats | None = None) -> Parsed:
     days = table.days("date")
     table.once([(str(day), name) for day, name in zip(days, names, strict=True)], column)
     if table.findings or not days:
@@ -128,7 +187,11 @@ def _long(table: Table, column: str, names: list[str], values: list[float]) -> P
     known, column_of = np.unique(np.array(names), return_inverse=True)
     matrix = np.full((len(axis), len(known)), np.nan)
     matrix[row, column_of] = values
-    panel = Panel(tuple(int(day) for day in axis), tuple(str(name) for name in known), matrix)
+    spread = None
+    if ranges is not None:
+        spread = np.full((len(ranges), len(axis), len(known)), np.nan)
+        spread[:, row, column_of] = ranges
+    panel = Panel(tuple(int(day) for day in axis), tuple(str(name) for name in known), matrix, spread)
     return Parsed(panel, len(names), min(days), max(days))
 
 
@@ -213,6 +276,22 @@ def _nav(table: Table, day: date | None, words: Vocabulary) -> Parsed:
     return Parsed(tuple(map(NavRow, books, navs, on)), len(books), day, day)
 
 
+def _pnl(table: Table, day: date | None, words: Vocabulary) -> Parsed:
+    books = _known_books(table, words)
+    actual = table.numbers("actual")
+    fees, intraday = _optional_numbers(table, "fees"), _optional_numbers(table, "intraday")
+    table.once([(book,) for book in books], "book")
+    return Parsed(tuple(map(PnlRow, books, actual, fees, intraday)), len(books), day, day)
+
+
+def _optional_numbers(table: Table, column: str) -> list[float | None]:
+    """The numbers of a column that may be absent; None in empty cells."""
+    if not table.has(column):
+        return [None] * len(table.rows)
+    numbers = table.numbers(column, empty=0.0)
+    return [number if text else None for number, text in zip(numbers, table.texts(column), strict=True)]
+
+
 def _instruments(table: Table, _day: date | None, words: Vocabulary) -> Parsed:
     names = table.names("instrument")
     table.once([(name,) for name in names], "instrument")
@@ -272,7 +351,7 @@ def _kind(table: Table, at: int, text: str) -> InstrumentKind:
 
 
 INSTRUMENT_FIELDS = ("instrument", "currency", "kind", "multiplier", "calendar", "expiry")
-PRICE_FIELDS = ("open", "high", "low", "volume", "currency")
+PRICE_FIELDS = (*RANGE_FIELDS, "volume", "currency")
 
 Reader = Callable[[Table, date | None, Vocabulary], Parsed]
 READERS: Mapping[FileKind, tuple[tuple[str, ...], tuple[str, ...], bool, Reader]] = {
@@ -281,6 +360,7 @@ READERS: Mapping[FileKind, tuple[tuple[str, ...], tuple[str, ...], bool, Reader]
     FileKind.FX: (("pair", "rate"), (), False, _fx),
     FileKind.INSTRUMENTS: (("instrument", "currency"), INSTRUMENT_FIELDS[2:], True, _instruments),
     FileKind.NAV: (("book", "nav"), ("nav_date", "flows", "units"), False, _nav),
+    FileKind.PNL: (("book", "actual"), ("fees", "intraday"), False, _pnl),
     FileKind.HISTORY: (("date", "instrument", "close"), PRICE_FIELDS, False, _history),
     FileKind.HISTORY_FX: (("date", "pair", "rate"), (), False, _history_fx),
 }

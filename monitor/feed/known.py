@@ -11,6 +11,7 @@ from monitor.facts import Entry, FileAccepted, FileRefused, SettingsAdopted, Use
 from monitor.words import FileKind
 
 LATEST = 2**62  # a sequence after every entry
+HINDSIGHT = FileKind.PNL  # for looking back: no evening rests on such a file, waits for it or is checked again for it
 TABLES = """
 CREATE TABLE accepted (
     seq INTEGER PRIMARY KEY, name TEXT, kind TEXT, source TEXT, day TEXT, sha256 TEXT) STRICT;
@@ -68,31 +69,35 @@ class Known:
         return [file for file in self.files(kind, since=day) if file.day == day]
 
     def refusals(self, day: date) -> list[str]:
-        """Why files of this day, or files without a day, were refused and not mended since."""
+        """Why files of this day, or files without a day, were refused and not mended since.
+
+        Only of files that evenings rest on.
+        """
         rows = self.index.execute(
-            "SELECT reason FROM refused AS r WHERE kind IS NOT NULL AND day IN (?, '') AND seq <= ?"
+            "SELECT reason FROM refused AS r WHERE kind IS NOT NULL AND kind <> ? AND day IN (?, '') AND seq <= ?"
             " AND NOT EXISTS (SELECT 1 FROM accepted AS a WHERE a.kind = r.kind AND a.source = r.source"
             " AND a.day = r.day AND a.seq > r.seq AND a.seq <= ?)"
             " AND seq = (SELECT MAX(seq) FROM refused AS s WHERE s.name = r.name AND s.seq <= ?) ORDER BY name",
-            (day.isoformat(), self.seq, self.seq, self.seq),
+            (HINDSIGHT, day.isoformat(), self.seq, self.seq, self.seq),
         )
         return [reason for (reason,) in rows]
 
 
 @dataclass(frozen=True)
 class Decisions:
-    """What was decided last. in_effect: hash by kind, source and day. refused: hash by name, of files not mended.
+    """What was decided last. in_effect: hash by kind, source and day. refused: kind and hash by name, if not mended.
 
     A refusal stands under the settings that it was made with: other books, currencies or patterns might take the file.
+    So might a newer edition, which knows a kind for its name.
     """
 
     in_effect: Mapping[tuple[str, str, str], str]
-    refused: Mapping[str, str | None]
+    refused: Mapping[str, tuple[str | None, str | None]]
 
     def stands(self, name: str, identity: tuple[FileKind, str, date | None] | None, sha256: str | None) -> bool:
         """Whether this very content was decided about under this name."""
         if name in self.refused:
-            return self.refused[name] == sha256
+            return self.refused[name] == (identity[0] if identity else None, sha256)
         if identity is None or sha256 is None:
             return False
         kind, source, day = identity
@@ -102,19 +107,24 @@ class Decisions:
 def decisions(index: sqlite3.Connection) -> Decisions:
     accepted = index.execute("SELECT kind, source, day, sha256, MAX(seq) FROM accepted GROUP BY kind, source, day")
     refused = index.execute(
-        "SELECT name, sha256 FROM (SELECT name, sha256, MAX(seq) AS last FROM refused GROUP BY name) AS r"
+        "SELECT name, kind, sha256 FROM (SELECT name, kind, sha256, MAX(seq) AS last FROM refused GROUP BY name) AS r"
         " WHERE NOT EXISTS (SELECT 1 FROM accepted AS a WHERE a.name = r.name AND a.seq > r.last)"
         " AND last > (SELECT COALESCE(MAX(seq), 0) FROM settings_adopted)"
     )
     return Decisions(
         {(kind, source, day): sha256 for kind, source, day, sha256, _ in accepted},
-        dict(refused.fetchall()),
+        {name: (kind, sha256) for name, kind, sha256 in refused},
     )
 
 
 def accepted_after(index: sqlite3.Connection, seq: int) -> list[tuple[date | None, int]]:
-    """The dates of the files accepted after an entry, None for files without one, each with the newest such entry."""
-    rows = index.execute("SELECT day, MAX(seq) FROM accepted WHERE seq > ? GROUP BY day", (seq,))
+    """The dates of the files accepted after an entry, None for files without one, each with the newest such entry.
+
+    Files that no evening rests on are passed over.
+    """
+    rows = index.execute(
+        "SELECT day, MAX(seq) FROM accepted WHERE seq > ? AND kind <> ? GROUP BY day", (seq, HINDSIGHT)
+    )
     return [(_day(day), newest) for day, newest in rows]
 
 

@@ -18,11 +18,12 @@ DEFAULT_PATTERNS: Mapping[FileKind, str] = {
     FileKind.POSITIONS: "positions_{date}.csv",
     FileKind.FX: "fx_{date}.csv",
     FileKind.NAV: "nav_{date}.csv",
+    FileKind.PNL: "pnl_{date}.csv",
     FileKind.INSTRUMENTS: "instruments.csv",
     FileKind.HISTORY_FX: "history_fx*.csv",
     FileKind.HISTORY: "history*.csv",
 }
-LATER_NAMES = ("actions_*", "pnl_*", "scenario_pnl_*", "*.manifest", "*.csv.gz", "*.parquet")
+LATER_NAMES = ("actions_*", "scenario_pnl_*", "*.manifest", "*.csv.gz", "*.parquet")
 UNFINISHED = re.compile(r"\..*|.*\.(tmp|part)")
 
 

@@ -14,7 +14,6 @@ from monitor.world import Book
 RESERVED_BOOKS = ("firm", "any")  # `firm` names all books together, `any` selects every book
 LATER_FILES = {
     "actions": "splits and dividends",
-    "pnl": "the books' own P&L",
     "scenario_pnl": "scenario P&L of another system",
     "manifest": "control totals",
 }

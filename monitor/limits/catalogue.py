@@ -6,9 +6,11 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from monitor.limits.parameters import (
+    ComponentParameters,
     DayLossParameters,
     LossProbabilityParameters,
     Parameters,
+    TailIndexParameters,
     TailParameters,
     VolatilityParameters,
 )
@@ -20,7 +22,6 @@ LATER_MEASURES = (
     "sum_of_large_weights",
     "herfindahl",
     "var_to_reference",
-    "component",
     "month_loss",
     "loss_since_cost",
     "drawdown",
@@ -29,7 +30,6 @@ LATER_MEASURES = (
     "stress_loss",
     "stale_days",
     "backtest_exceptions",
-    "tail_index",
     "change",
 )
 
@@ -65,6 +65,10 @@ _ALL = (
     Measure("value_at_risk", "value at risk", LOSS_UNITS, LOSS_UNITS, TailParameters),
     Measure("expected_shortfall", "expected shortfall", LOSS_UNITS, LOSS_UNITS, TailParameters),
     Measure("loss_probability", "probability of a loss", (Unit.RATIO,), (Unit.RATIO,), LossProbabilityParameters),
+    Measure("component", "component", LOSS_UNITS, LOSS_UNITS, ComponentParameters),
+    Measure("incremental", "incremental risk", LOSS_UNITS, LOSS_UNITS, ComponentParameters),
+    Measure("marginal", "marginal risk", (Unit.RATIO,), (Unit.RATIO,), ComponentParameters),
+    Measure("tail_index", "tail index of losses", (Unit.NUMBER,), (Unit.NUMBER,), TailIndexParameters),
     Measure("day_loss", "loss of the day", LOSS_UNITS, LOSS_UNITS, DayLossParameters),
 )
 MEASURES: Mapping[str, Measure] = {measure.name: measure for measure in _ALL}

@@ -6,12 +6,14 @@ from collections.abc import Iterator, Sequence
 
 import numpy as np
 
-from monitor.limits.measures import MEASURES, Measured, Parameters
+from monitor.limits.measured import Measured, Parameters
+from monitor.limits.measures import MEASURES
 from monitor.limits.slices import Slice
-from monitor.limits.subjects import Members, book_subject, members_of, position_subject, selected_books
+from monitor.limits.subjects import Members, book_subject, position_subject, selected_books
 from monitor.limits.valuation import Valuation
+from monitor.limits.wholes import wholes
 from monitor.words import Subject, Unit
-from monitor.world import Book, BookFigures, MeasureCall, Rule, Selector, Terms, Unmeasured, World
+from monitor.world import BookFigures, Rule, Unmeasured, World
 
 
 def figures_of_books(valuation: Valuation) -> Iterator[BookFigures]:
@@ -89,43 +91,8 @@ def _position(world: World, book: str, at: int) -> Subject:
 
 def _wholes(valuation: Valuation) -> Iterator[Slice]:
     """One slice for each book of this round, and one for the firm when the round completes it."""
-    world = valuation.world
-    firm = world.terms.firm
-    for book in firm.books:
-        if world.scope.holds(book.id):
-            yield _whole(valuation, book, book.currency, book.calendar)
-    if world.scope.completes:
-        yield _whole(valuation, None, firm.base_currency, firm.calendar)
-
-
-def _whole(valuation: Valuation, book: Book | None, currency: str, calendar: str) -> Slice:
-    rule = _unwritten_rule(valuation.world.terms, book)
-    return Slice(valuation, rule, members_of(rule, valuation.world), currency, calendar)
-
-
-def _unwritten_rule(terms: Terms, book: Book | None) -> Rule:
-    """A rule without a limit that applies to a book, or to the firm."""
-    return Rule(
-        id="",
-        title="",
-        applies_to=(Selector("book", (book.id,)),) if book else (),
-        each=None,
-        measure=MeasureCall(terms.default_tail.name, terms.default_tail.parameters),
-        unit=Unit.AMOUNT,
-        currency=None,
-        near=None,
-        limit=None,
-        near_below=None,
-        limit_below=None,
-        kind=None,
-        owner=None,
-        tell=(),
-        in_force_from=None,
-        in_force_to=None,
-        because=None,
-        file="",
-        line=0,
-    )
+    scope = valuation.world.scope
+    return (part for part in wholes(valuation) if scope.holds(part.members.subjects[0].book))
 
 
 def _ask(part: Slice, name: str, parameters: Parameters) -> Measured:

@@ -5,7 +5,8 @@ from __future__ import annotations
 from collections.abc import Collection, Iterator
 
 from monitor.limits.coverage import figures_of_books, find_uncovered, find_unmeasured
-from monitor.limits.measures import MEASURES, Measured, divide
+from monitor.limits.measured import Measured, divide
+from monitor.limits.measures import MEASURES
 from monitor.limits.slices import Slice, shortened
 from monitor.limits.subjects import Members, books_under, members_of, with_past
 from monitor.limits.valuation import Valuation
@@ -78,6 +79,7 @@ def _answer(
     missing = _missing_book(rule, subject, part.world)
     if missing:
         value, reason = None, missing
+    low, high, unbounded = measured.bounds(at) if value is not None else (None, None, None)
     standing, side, distance = _held(rule, value)
     return Answer(
         rule=rule.id,
@@ -93,8 +95,9 @@ def _answer(
         side=side,
         distance=distance,
         utilisation=_utilisation(rule, value, side),
-        low=None,
-        high=None,
+        low=low,
+        high=high,
+        unbounded=unbounded,
         n=int(measured.n[at]) if measured.n is not None else None,
         reason=reason,
         marks=tuple(shortened([*marks, *measured.marks[at]]) if at in measured.marks else marks),

@@ -9,34 +9,58 @@ from typing import Annotated
 from pydantic import PlainValidator
 
 from monitor.limits.defaults import Confidence, Decay, Defaults, WindowLength
-from monitor.reading.fields import Level, Line, one_of, whole
+from monitor.reading.fields import Level, Line, one_of, probability, whole
 from monitor.reading.shapes import Shape
 from monitor.reading.values import Percent
+from monitor.words import Unit
 from monitor.world import MeasureCall
 
-LATER_TAIL_METHODS = (
+TAIL_METHODS = (
+    "historical",
     "age_weighted",
     "volatility_scaled",
+    "normal",
+    "student_t",
     "cornish_fisher",
     "peaks_over_threshold",
     "monte_carlo",
 )
-LATER_VOLATILITY_METHODS = ("garch", "parkinson", "garman_klass")
+COMPONENT_METHODS = ("historical", "age_weighted", "volatility_scaled", "normal", "student_t")
+PROBABILITY_METHODS = ("normal", "student_t", "historical")
+RANGE_METHODS = ("parkinson", "garman_klass")
+VOLATILITY_METHODS = ("sample", "ewma", "garch", *RANGE_METHODS)
 LATER_PARAMETERS = {
-    "horizon": "other ways to a longer horizon than the square root of time",
-    "tail_share": "the share of the tail",
     "participation": "the share of traded volume",
     "reference": "a reference portfolio",
     "days": "a number of days",
     "stresses": "stress scenarios",
     "net_by": "netting",
 }
+# The methods that a parameter goes with; a parameter that is not here goes with all of its measure.
+GOES_WITH = {
+    "drift": ("normal", "student_t", "cornish_fisher", "monte_carlo"),
+    "decay": ("age_weighted", "volatility_scaled", "ewma"),
+    "scaling": ("volatility_scaled",),
+    "fit": ("student_t",),
+    "tail_share": ("peaks_over_threshold",),
+    "distribution": ("monte_carlo",),
+    "paths": ("monte_carlo",),
+    "horizon": ("historical", "age_weighted", "normal", "student_t", "cornish_fisher", "peaks_over_threshold"),
+}
 
-TailMethod = Annotated[str, PlainValidator(one_of(("historical", "normal", "student_t"), LATER_TAIL_METHODS))]
-FittedMethod = Annotated[str, PlainValidator(one_of(("normal", "student_t"), LATER_TAIL_METHODS))]
-VolatilityMethod = Annotated[str, PlainValidator(one_of(("sample", "ewma"), LATER_VOLATILITY_METHODS))]
+TailMethod = Annotated[str, PlainValidator(one_of(TAIL_METHODS))]
+ComponentMethod = Annotated[str, PlainValidator(one_of(COMPONENT_METHODS))]
+ProbabilityMethod = Annotated[str, PlainValidator(one_of(PROBABILITY_METHODS))]
+VolatilityMethod = Annotated[str, PlainValidator(one_of(VOLATILITY_METHODS))]
 Drift = Annotated[str, PlainValidator(one_of(("zero", "sample")))]
 HorizonDays = Annotated[int, PlainValidator(whole(1, 250))]
+Horizon = Annotated[str, PlainValidator(one_of(("square_root", "overlapping")))]
+Scaling = Annotated[str, PlainValidator(one_of(("ewma", "garch")))]
+Fit = Annotated[str, PlainValidator(one_of(("likelihood", "kurtosis")))]
+TailShare = Annotated[Decimal, PlainValidator(probability("0.01", "0.5", "a share", "0.1 or 10 %"))]
+Distribution = Annotated[str, PlainValidator(one_of(("normal", "student_t")))]
+Paths = Annotated[int, PlainValidator(whole(10_000, 1_000_000))]
+TailName = Annotated[str, PlainValidator(one_of(("value_at_risk", "expected_shortfall")))]
 Contradiction = tuple[str, str, str]
 
 
@@ -46,33 +70,116 @@ class Parameters(Shape):
     name: Line
 
     def filled(self, defaults: Defaults) -> dict[str, object]:
-        """Every parameter by name as a plain value, the site's defaults where the rule is silent."""
-        given = {key: getattr(self, key) for key in self.written_keys() if key != "name"}
+        """Every parameter that goes with the method, as a plain value, the site's defaults where the rule is silent."""
+        given = {key: getattr(self, key) for key in self.written_keys() if key != "name" and self._goes(key)}
         return {key: getattr(defaults, key, None) if value is None else value for key, value in given.items()}
 
     def contradictions(self) -> Iterator[Contradiction]:
         """Parameters that do not go with others: the key, what was found, what was expected."""
+        for key, fitting in GOES_WITH.items():
+            if key in self.model_fields_set and not self._goes(key):
+                known = [name for name in fitting if name in self._methods()]
+                methods = known[0] if len(known) == 1 else f"{', '.join(known[:-1])} or {known[-1]}"
+                yield (
+                    key,
+                    f"`{key}` with the method {getattr(self, 'method', '')}",
+                    f"no {key}, or the method {methods}",
+                )
+
+    def misfits(self, each: str | None, unit: Unit) -> Iterator[Contradiction]:
+        """Parameters that do not go with the rule's subjects or its unit, as contradictions are."""
         return iter(())
+
+    def _goes(self, key: str) -> bool:
+        method = getattr(self, "method", None)
+        return method is None or key not in GOES_WITH or method in GOES_WITH[key]
+
+    def _methods(self) -> tuple[str, ...]:
+        """The methods that this measure knows."""
+        return TAIL_METHODS
 
 
 class TailParameters(Parameters):
-    """Value at risk and expected shortfall."""
+    """Value at risk and expected shortfall. An age-weighted rule states its decay: one for volatility is too quick."""
 
     method: TailMethod = "historical"
     confidence: Confidence | None = None
     horizon_days: HorizonDays = 1
+    horizon: Horizon = "square_root"
     window: WindowLength | None = None
     drift: Drift = "zero"
+    decay: Decay | None = None
+    scaling: Scaling = "ewma"
+    fit: Fit = "likelihood"
+    tail_share: TailShare = Decimal("0.1")
+    distribution: Distribution = "normal"
+    paths: Paths = 100_000
+
+    def filled(self, defaults: Defaults) -> dict[str, object]:
+        parameters = super().filled(defaults)
+        if self.method == "volatility_scaled" and self.scaling == "garch":
+            parameters.pop("decay")
+        return parameters
 
     def contradictions(self) -> Iterator[Contradiction]:
-        if self.method == "historical" and "drift" in self.model_fields_set:
-            yield "drift", "a drift with the method historical", "no drift, or the method normal or student_t"
+        yield from super().contradictions()
+        yield from _decays(self.method, self.scaling, self.decay)
+        if self.horizon == "overlapping" and self.window is not None and self.window <= self.horizon_days:
+            yield "horizon", f"a horizon of {self.horizon_days} days in a window of {self.window}", "a longer window"
+
+
+def _decays(method: str, scaling: str, decay: float | None) -> Iterator[Contradiction]:
+    if method == "age_weighted" and decay is None:
+        yield "method", "age_weighted without a decay", "`decay` beside it, such as 0.995"
+    if method == "volatility_scaled" and scaling == "garch" and decay is not None:
+        yield "decay", "a decay with the scaling garch", "no decay, or the scaling ewma"
 
 
 def default_tail(defaults: Defaults) -> MeasureCall:
     """The value at risk that a page shows of every book, whatever the rules say."""
+    return tail_measure(defaults, "historical")
+
+
+def tail_measure(defaults: Defaults, method: str) -> MeasureCall:
+    """Value at risk by a method, everything else as the site's defaults say; age-weighted with a decay of 0.995.
+
+    The decay is that of Hull's example (RMFI 4e, ch. 13).
+    """
     name = "value_at_risk"
-    return MeasureCall(name, TailParameters(name=name).filled(defaults))
+    decay = {"decay": 0.995} if method == "age_weighted" else {}
+    return MeasureCall(name, TailParameters.model_validate({"name": name, "method": method, **decay}).filled(defaults))
+
+
+class ComponentParameters(Parameters):
+    """What a subject adds to the figure `of` the book, or the firm, that it lies in."""
+
+    of: TailName = "value_at_risk"
+    method: ComponentMethod = "historical"
+    confidence: Confidence | None = None
+    horizon_days: HorizonDays = 1
+    window: WindowLength | None = None
+    drift: Drift = "zero"
+    decay: Decay | None = None
+    scaling: Scaling = "ewma"
+
+    def filled(self, defaults: Defaults) -> dict[str, object]:
+        parameters = super().filled(defaults)
+        if self.method == "volatility_scaled" and self.scaling == "garch":
+            parameters.pop("decay")
+        return parameters
+
+    def contradictions(self) -> Iterator[Contradiction]:
+        yield from super().contradictions()
+        yield from _decays(self.method, self.scaling, self.decay)
+        if self.name != "incremental" and self.method == "age_weighted" and self.of == "value_at_risk":
+            yield (
+                "method",
+                "age_weighted with of: value_at_risk, a single scenario that has no components",
+                "of: expected_shortfall, or another method",
+            )
+
+    def _methods(self) -> tuple[str, ...]:
+        return COMPONENT_METHODS
 
 
 class VolatilityParameters(Parameters):
@@ -80,9 +187,23 @@ class VolatilityParameters(Parameters):
     window: WindowLength | None = None
     decay: Decay | None = None
 
-    def contradictions(self) -> Iterator[Contradiction]:
-        if self.method == "sample" and "decay" in self.model_fields_set:
-            yield "decay", "a decay with the method sample", "no decay, or the method ewma"
+    def misfits(self, each: str | None, unit: Unit) -> Iterator[Contradiction]:
+        if self.method in RANGE_METHODS and not (each == "position" and unit is Unit.RATIO):
+            yield (
+                "method",
+                f"{self.method} for what has no high and low prices of its own",
+                "`each: position` with `unit: ratio`, or another method",
+            )
+
+    def _methods(self) -> tuple[str, ...]:
+        return VOLATILITY_METHODS
+
+
+class TailIndexParameters(Parameters):
+    """`tail_share`: the share of the scenarios, the worst ones, that the index is estimated from."""
+
+    tail_share: TailShare = Decimal("0.1")
+    window: WindowLength | None = None
 
 
 class LossProbabilityParameters(Parameters):
@@ -90,8 +211,9 @@ class LossProbabilityParameters(Parameters):
 
     threshold: Level
     of: Annotated[str, PlainValidator(one_of(("nav", "gross")))] | None = None
-    method: FittedMethod = "normal"
+    method: ProbabilityMethod = "normal"
     horizon_days: HorizonDays = 1
+    horizon: Horizon = "square_root"
     window: WindowLength | None = None
     drift: Drift = "zero"
 
@@ -100,6 +222,7 @@ class LossProbabilityParameters(Parameters):
         return {**super().filled(defaults), "threshold": float(threshold), "of": self.of}
 
     def contradictions(self) -> Iterator[Contradiction]:
+        yield from super().contradictions()
         if isinstance(self.threshold, Percent) and self.of is None:
             yield "threshold", f"the percentage {self.threshold} of nothing", "`of: nav` or `of: gross` beside it"
         if not isinstance(self.threshold, Percent) and self.of is not None:
@@ -107,6 +230,9 @@ class LossProbabilityParameters(Parameters):
         size = self.threshold.number if isinstance(self.threshold, Percent) else self.threshold
         if size <= Decimal(0):
             yield "threshold", f"the threshold {self.threshold}", "a loss above zero"
+
+    def _methods(self) -> tuple[str, ...]:
+        return PROBABILITY_METHODS
 
 
 class DayLossParameters(Parameters):

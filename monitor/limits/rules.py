@@ -122,7 +122,7 @@ def _read_rule(document: Document, path: Path, context: RuleContext) -> Rule | N
     selectors = read_selectors(document, (*path, "applies_to"), context) if "applies_to" in written else ()
     if "each" in written:
         check_each(document, (*path, "each"))
-    measure, call = _read_measure(document, (*path, "measure"), context) if "measure" in written else (None, None)
+    measure, parameters = _read_measure(document, (*path, "measure")) if "measure" in written else (None, None)
     first, last = _in_force(document, (*path, "in_force")) if "in_force" in written else (None, None)
     document.refuse_unknown((*path, "tell"), context.groups, "groups")
     _check_owner(document, (*path, "owner"), context)
@@ -131,15 +131,18 @@ def _read_rule(document: Document, path: Path, context: RuleContext) -> Rule | N
     if shape.tell == ():
         document.refuse((*path, "tell"), "at least one group", remedy="Leave the key out for the nightly note's group")
     unit = _unit(document, path, shape, measure)
-    if unit is None or call is None:
+    if unit is None or parameters is None:
         return None
+    for key, found, expected in parameters.misfits(shape.each, unit):
+        if document.sound_below((*path, "measure")):
+            document.refuse((*path, "measure", key), expected, found)
     levels = read_levels(document, path, shape.levels(), measure, unit)
     rule = Rule(
         id=shape.id,
         title=shape.title or "",
         applies_to=selectors,
         each=shape.each,
-        measure=call,
+        measure=MeasureCall(measure.name, parameters.filled(context.defaults)),
         unit=unit,
         currency=shape.currency,
         near=levels.near,
@@ -158,8 +161,8 @@ def _read_rule(document: Document, path: Path, context: RuleContext) -> Rule | N
     return rule if shape.title else replace(rule, title=made_title(rule))
 
 
-def _read_measure(document: Document, path: Path, context: RuleContext) -> tuple[Measure | None, MeasureCall | None]:
-    """The measure that a rule names and the call of it; None for what could not be read."""
+def _read_measure(document: Document, path: Path) -> tuple[Measure | None, Parameters | None]:
+    """The measure that a rule names and its parameters; None for what could not be read."""
     written = document.at(path)
     if written is UNREADABLE:
         return None, None
@@ -176,10 +179,9 @@ def _read_measure(document: Document, path: Path, context: RuleContext) -> tuple
         return None, None
     measure = MEASURES[name]
     parameters = document.shape(path, measure.parameters, LATER_PARAMETERS)
-    if parameters is None:
-        return measure, None
-    _check_parameters(document, path, parameters)
-    return measure, MeasureCall(name, parameters.filled(context.defaults))
+    if parameters is not None:
+        _check_parameters(document, path, parameters)
+    return measure, parameters
 
 
 def _refuse_measure(document: Document, path: Path) -> None:

@@ -66,6 +66,28 @@ class Slice:
         """The newest sessions of the calendar's window, `window` at most."""
         return self.valuation.scenarios(self.calendar, self.currency).newest(window)
 
+    def overlapping(self, window: int, days: int) -> Floats:
+        """(positions, sessions) P&L over each run of so many sessions within the newest `window`."""
+        pnl = self.valuation.overlapping(self.calendar, self.currency, days)
+        return pnl[:, max(pnl.shape[1] - max(window - days + 1, 0), 0) :]
+
+    def log_returns(self, window: int) -> Floats:
+        """(positions, n) of the newest `window` sessions."""
+        returns = self.valuation.log_returns(self.calendar, self.currency)
+        return returns[:, max(returns.shape[1] - window, 0) :]
+
+    def ranges(self, sessions: int, subjects: Integers) -> tuple[Floats, Floats, Floats, Floats]:
+        """Opens, highs, lows and closes of the newest sessions, (k, sessions), of subjects of one position each."""
+        found = self.world.windows[self.calendar].ranges
+        if found is None:
+            raise RuntimeError("a world without the day's ranges was asked for them")
+        instruments = self.world.holdings.instrument[self.members.position[subjects]]
+        newest = slice(found.close.shape[1] - sessions, None)
+        opened, high, low, close = (
+            matrix[instruments, newest] for matrix in (found.open, found.high, found.low, found.close)
+        )
+        return opened, high, low, close
+
     def last_session(self) -> LastSession:
         return self.valuation.last_session(self.calendar, self.currency)
 

@@ -18,24 +18,16 @@ class Scenarios:
 
     pnl: (positions, n), zero where a position has no return. lacks: (positions, n) no return although the instrument's
     market was open, or before its first close. riskless: (positions,) cash in this very currency.
-    relative: (positions, n) price over the price before, in this currency (futures: local); NaN where either is missing
-    or not positive.
     """
 
     pnl: Floats
     lacks: Booleans
     riskless: Booleans
-    relative: Floats
 
     def newest(self, count: int) -> Scenarios:
         """Those of the newest sessions, `count` at most."""
         rows = slice(max(self.pnl.shape[1] - count, 0), None)
-        return Scenarios(self.pnl[:, rows], self.lacks[:, rows], self.riskless, self.relative[:, rows])
-
-    def log_returns(self) -> Floats:
-        """(positions, n), zero where a position has no price to compare with, NaN where prices have no logarithm."""
-        with np.errstate(all="ignore"):
-            return np.where(self.lacks & np.isnan(self.relative), 0.0, np.log(self.relative))
+        return Scenarios(self.pnl[:, rows], self.lacks[:, rows], self.riskless)
 
 
 @dataclass(frozen=True)
@@ -73,11 +65,33 @@ class Valuation:
         key = (calendar, currency)
         if key not in self._scenarios:
             world, window = self.world, self.world.windows[calendar]
-            pnl, relative = _pnl(world, world.holdings, window, currency, world.market.close, world.market.rate)
-            lacks = ~np.isfinite(pnl) | _gaps(world, world.holdings, window, currency)[:, 1:]
-            riskless = own_cash(world, world.holdings, currency)
-            self._scenarios[key] = Scenarios(np.where(np.isfinite(pnl), pnl, 0.0), lacks, riskless, relative)
+            pnl = _pnl(world, world.holdings, window, currency, world.market.close, world.market.rate)
+            unknown = ~np.isfinite(pnl)
+            pnl[unknown] = 0.0
+            unknown |= _gaps(world, world.holdings, window, currency)[:, 1:]
+            self._scenarios[key] = Scenarios(pnl, unknown, own_cash(world, world.holdings, currency))
         return self._scenarios[key]
+
+    def overlapping(self, calendar: str, currency: str, days: int) -> Floats:
+        """(positions, sessions - days) what tonight's positions would have made over each run of so many returns.
+
+        Zero where a position has no price at either end. Column t ends with the session of column t + days - 1 of
+        `scenarios`.
+        """
+        world, window = self.world, self.world.windows[calendar]
+        pnl = _pnl(world, world.holdings, window, currency, world.market.close, world.market.rate, days)
+        return np.where(np.isfinite(pnl), pnl, 0.0)
+
+    def log_returns(self, calendar: str, currency: str) -> Floats:
+        """(positions, n) of the prices in this currency, of futures in their own.
+
+        Zero where a position has no price to compare with, NaN where prices have no logarithm.
+        """
+        world = self.world
+        relative = _relative(world, world.holdings, self.world.windows[calendar], currency, 1)
+        lacks = self.scenarios(calendar, currency).lacks
+        with np.errstate(all="ignore"):
+            return np.where(lacks & np.isnan(relative), 0.0, np.log(relative))
 
     def last_session(self, calendar: str, currency: str) -> LastSession:
         """What the positions held before the session just ended made on it; nothing when the evening is no session."""
@@ -92,7 +106,7 @@ class Valuation:
             return LastSession(held, np.zeros(len(held.quantity)), np.zeros(len(held.quantity), dtype=np.bool_))
         close, rate = window.close[:, -2:], window.rate[:, -2:]
         newest = Window(calendar, window.sessions[-2:], close, rate, window.gap[:, -2:], window.rate_gap[:, -2:])
-        pnl, _ = _pnl(self.world, held, newest, currency, close[:, 0], rate[:, 0])
+        pnl = _pnl(self.world, held, newest, currency, close[:, 0], rate[:, 0])
         return LastSession(held, pnl[:, 0], np.asarray(_gaps(self.world, held, newest, currency).any(axis=1)))
 
 
@@ -144,27 +158,41 @@ def _units(world: World, holdings: Holdings) -> Floats:
 
 
 def _pnl(
-    world: World, holdings: Holdings, window: Window, currency: str, close: Floats, rate: Floats
-) -> tuple[Floats, Floats]:
-    """P&L (positions, n), not finite where something is not known, and prices over the prices before (positions, n).
+    world: World, holdings: Holdings, window: Window, currency: str, close: Floats, rate: Floats, days: int = 1
+) -> Floats:
+    """P&L over each run of `days` sessions, (positions, sessions - days), not finite where something is not known.
 
     close (instruments,) and rate (currencies,) are those of the day the positions are valued on. Local and FX log
     returns are added: exposure x (exp(r) - 1) = exposure x (P_d F_d / (P_d-1 F_d-1) - 1). A future earns on its local
     price alone, at that day's FX rate; where one of the prices is not positive, by their difference.
     """
     future = of_kind(world, holdings, InstrumentKind.FUTURE)
-    money = position_currencies(world, holdings)
-    local, tonight = window.close[holdings.instrument], close[holdings.instrument]
+    tonight = close[holdings.instrument]
     with np.errstate(all="ignore"):
-        priced = local * _into(world, window.rate, currency)[money]
-        priced[future] = local[future]
-        positive = priced > 0
-        relative = np.where(positive[:, 1:] & positive[:, :-1], priced[:, 1:] / priced[:, :-1], np.nan)
-        moves = tonight[:, None] * (relative - 1.0)
-        by_difference = np.isnan(relative[future]) | ~(tonight[future] > 0)[:, None]
-        moves[future] = np.where(by_difference, np.diff(local[future], axis=1), moves[future])
-        units = _units(world, holdings) * _into(world, rate, currency)[money]
-        return units[:, None] * moves, relative
+        moves = _relative(world, holdings, window, currency, days)
+        by_difference = future[:, None] & (np.isnan(moves) | ~(tonight > 0)[:, None])
+        moves -= 1.0
+        moves *= tonight[:, None]
+        if by_difference.any():
+            local = window.close[holdings.instrument[future]]
+            moves[future] = np.where(by_difference[future], local[:, days:] - local[:, :-days], moves[future])
+        moves *= (_units(world, holdings) * _into(world, rate, currency)[position_currencies(world, holdings)])[:, None]
+        return moves
+
+
+def _relative(world: World, holdings: Holdings, window: Window, currency: str, days: int) -> Floats:
+    """Price over the price `days` sessions before, in a currency (futures: local), (positions, sessions - days).
+
+    NaN where either is missing or not positive.
+    """
+    future = of_kind(world, holdings, InstrumentKind.FUTURE)
+    priced = window.close[holdings.instrument]
+    with np.errstate(all="ignore"):
+        worth = _into(world, window.rate, currency)[position_currencies(world, holdings)]
+        worth[future] = 1.0
+        priced *= worth
+        priced[~(priced > 0)] = np.nan
+        return np.asarray(priced[:, days:] / priced[:, :-days])
 
 
 def _gaps(world: World, holdings: Holdings, window: Window, currency: str) -> Booleans:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
 from decimal import Decimal
+from typing import Any
 
 from monitor.limits.catalogue import MEASURES
 from monitor.words import Unit
@@ -13,11 +14,21 @@ _SHARES = {Unit.OF_NAV: "NAV", Unit.OF_GROSS: "gross exposure"}
 _SUBJECTS = "the subject's "
 _METHODS = {
     "historical": "historical simulation",
+    "age_weighted": "age-weighted historical simulation",
+    "volatility_scaled": "volatility-scaled historical simulation",
     "normal": "normal distribution",
     "student_t": "Student's t distribution",
+    "cornish_fisher": "Cornish-Fisher expansion",
+    "peaks_over_threshold": "peaks over threshold with a generalised Pareto tail",
+    "monte_carlo": "Monte Carlo simulation",
     "sample": "sample standard deviation",
     "ewma": "exponentially weighted",
+    "garch": "GARCH(1,1)",
+    "parkinson": "Parkinson's estimator from highs and lows",
+    "garman_klass": "Garman and Klass's estimator from opens, highs, lows and closes",
 }
+_VOLATILITIES = {"ewma": "exponentially weighted volatility", "garch": "GARCH volatility"}
+_DISTRIBUTIONS = {"normal": "the normal distribution", "student_t": "Student's t distribution"}
 
 
 def sentence(rule: Rule) -> str:
@@ -154,22 +165,46 @@ def _parameters(rule: Rule) -> str:
             else f"{threshold.normalize():,f} in {_owner(rule) or _SUBJECTS}currency"
         )
         said.append(f"above {size}")
-    method = given.get("method")
-    if method:
-        said.append(_METHODS[str(method)])
+    elif "of" in given:
+        said.append(f"of {_owner(rule) or _SUBJECTS}{MEASURES[given['of']].noun}")
+    if "method" in given:
+        said.append(_METHODS[str(given["method"])])
     if "confidence" in given:
         said.append(f"confidence {percent(given['confidence'])}")
     if "horizon_days" in given:
         said.append("horizon " + _counted(given["horizon_days"], "day"))
     if "window" in given:
         said.append("window " + _counted(given["window"], "session"))
-    if method == "ewma":
-        said.append(f"decay {given['decay']}")
-    if method in ("normal", "student_t"):
+    said += details(given)
+    if "drift" in given:
         said.append("drift " + ("as in the window" if given["drift"] == "sample" else "zero"))
     if "basis" in given:
         said.append(f"{given['basis']} P&L")
     return f" ({', '.join(said)})" if said else ""
+
+
+def method_words(parameters: Mapping[str, Any]) -> str:
+    """A method of value at risk with everything that it was told, in a few words."""
+    window, confidence = _counted(parameters["window"], "session"), percent(parameters["confidence"])
+    return ", ".join([_METHODS[parameters["method"]], *details(parameters), confidence, window])
+
+
+def details(parameters: Mapping[str, Any]) -> list[str]:
+    """What a method was told beyond confidence, horizon, window and drift, in words."""
+    said = []
+    if "scaling" in parameters:
+        said.append(f"scaled by {_VOLATILITIES[parameters['scaling']]}")
+    if "decay" in parameters and ("scaling" in parameters or parameters["method"] in ("ewma", "age_weighted")):
+        said.append(f"decay {parameters['decay']}")
+    if parameters.get("fit") == "kurtosis":
+        said.append("fitted to the kurtosis")
+    if "tail_share" in parameters:
+        said.append(f"from the worst {percent(parameters['tail_share'])} of the sessions")
+    if "paths" in parameters:
+        said.append(f"{parameters['paths']:,} draws of {_DISTRIBUTIONS[parameters['distribution']]}")
+    if parameters.get("horizon") == "overlapping":
+        said.append("overlapping periods")
+    return said
 
 
 def percent(fraction: object) -> str:

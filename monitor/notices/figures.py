@@ -13,7 +13,7 @@ from decimal import Decimal
 from monitor.words import Side, Unit
 from monitor.world import Answer, How
 
-_SHOWN_AS_PERCENTAGE = frozenset({"volatility", "loss_probability"})
+_SHOWN_AS_PERCENTAGE = frozenset({"volatility", "loss_probability", "marginal"})
 _MEASURES = {
     "value_at_risk": "value at risk (VaR)",
     "expected_shortfall": "expected shortfall (ES)",
@@ -23,6 +23,9 @@ _MEASURES = {
     "long": "long exposure",
     "short": "short exposure",
     "count": "number of positions",
+    "component": "component of the risk",
+    "incremental": "incremental risk",
+    "marginal": "marginal risk",
     "loss_probability": "probability of the loss",
 }
 _MOST_LEVEL_DECIMALS = 6
@@ -159,7 +162,8 @@ def how_made(how: How, n: int | None = None) -> str:
         count(how.horizon_days, "day") if how.horizon_days is not None else None,
         count(how.window, "session") if how.window is not None else None,
         f"n = {n}" if n is not None else None,
-        f"of {how.of}" if how.of else None,
+        how.detail,
+        f"of {measure_name(how.of)}" if how.of else None,
     ]
     return ", ".join(part for part in parts if part)
 

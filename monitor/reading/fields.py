@@ -132,7 +132,9 @@ def level(value: object) -> Decimal | Percent:
     return Decimal(value)
 
 
-def probability(least: str, open_end: str = "1") -> Callable[[object], Decimal]:
+def probability(
+    least: str, open_end: str = "1", what: str = "a probability", such_as: str = "0.99 or 99 %"
+) -> Callable[[object], Decimal]:
     """A probability from `least` to below `open_end`, exactly as written; percentages count as hundredths."""
 
     def read(value: object) -> Decimal:
@@ -141,10 +143,10 @@ def probability(least: str, open_end: str = "1") -> Callable[[object], Decimal]:
         if isinstance(value, Percent):
             value = value.fraction
         if isinstance(value, bool) or not isinstance(value, int | Decimal):
-            raise unfit("a probability such as 0.99 or 99 %")
+            raise unfit(f"{what} such as {such_as}")
         if not Decimal(least) <= value < Decimal(open_end):
             remedy = f"Write {value} %" if value > 1 else ""
-            raise unfit(f"a probability from {least} to below {open_end}, such as 0.99 or 99 %", remedy=remedy)
+            raise unfit(f"{what} from {least} to below {open_end}, such as {such_as}", remedy=remedy)
         return Decimal(value)
 
     return read

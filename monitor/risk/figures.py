@@ -22,6 +22,13 @@ class Lack(IntEnum):
     CONSTANT = 3
     OUT_OF_RANGE = 4
     NO_THRESHOLD = 5
+    OUTSIDE_DOMAIN = 6
+    FEW_IN_TAIL = 7
+    NO_FIT = 8
+    INFINITE_MEAN = 9
+    NO_RANGE = 10
+    NOT_SCALABLE = 11
+    NO_EXPOSURE = 12
 
 
 LACK_TEXT: dict[Lack, str] = {
@@ -31,6 +38,13 @@ LACK_TEXT: dict[Lack, str] = {
     Lack.CONSTANT: "every scenario has the same value, which is not 0: no spread to measure",
     Lack.OUT_OF_RANGE: "the scenarios are too large or too small to calculate with",
     Lack.NO_THRESHOLD: "the loss to compare with is missing or not a finite number",
+    Lack.OUTSIDE_DOMAIN: "skewness and kurtosis lie outside the domain of the Cornish-Fisher expansion",
+    Lack.FEW_IN_TAIL: "too few scenarios lie beyond the threshold to fit the tail",
+    Lack.NO_FIT: "the fit did not settle",
+    Lack.INFINITE_MEAN: "the fitted tail is so heavy that the mean loss in it is infinite",
+    Lack.NO_RANGE: "no usable high and low prices on some sessions",
+    Lack.NOT_SCALABLE: "the components of the estimate cannot be scaled to the figure told",
+    Lack.NO_EXPOSURE: "the exposure is 0 or unknown: nothing to reckon a unit of it from",
 }
 
 

@@ -23,6 +23,10 @@ class FitNote(IntEnum):
     NORMAL_FOR_TOO_FEW = 3
     NORMAL_FOR_NO_FIT = 4
     NU_AT_FLOOR = 5
+    EWMA_FOR_NO_FIT = 6
+    INSIDE_THRESHOLD = 7
+    ONE_SCENARIO = 8
+    SHAPE_AT_FLOOR = 9
 
 
 FIT_NOTE_TEXT: dict[FitNote, str] = {
@@ -32,6 +36,10 @@ FIT_NOTE_TEXT: dict[FitNote, str] = {
     FitNote.NORMAL_FOR_TOO_FEW: "by the normal: too few scenarios to fit Student's t",
     FitNote.NORMAL_FOR_NO_FIT: "by the normal: the fit of Student's t did not settle",
     FitNote.NU_AT_FLOOR: "Student's t with its degrees of freedom held at the lowest allowed",
+    FitNote.EWMA_FOR_NO_FIT: "scaled by EWMA volatility: GARCH could not be fitted",
+    FitNote.INSIDE_THRESHOLD: "historical: the confidence lies inside the threshold, where no tail is fitted",
+    FitNote.ONE_SCENARIO: "one scenario alone outweighs the tail: the shortfall is that scenario, no mean of several",
+    FitNote.SHAPE_AT_FLOOR: "peaks over threshold with the shape of its tail held at the lowest allowed",
 }
 
 

@@ -30,7 +30,7 @@ BOOKS = MappingProxyType({"north-quay": ("EUR", "XDUB"), "far-east": ("JPY", "XT
 WINDOW = 500
 
 # Of all files of the story, by name; it changes when the story is changed on purpose, and then only.
-STORY_SHA256 = "f0419651380e8ef1bff7e5c21938b58eb31441eefa47fe33a1032908ea240347"
+STORY_SHA256 = "708c5e0f88d60cdd6b8e331d8c800a567da97f6324aedf700eb20c8a2b458917"
 
 
 def rows(data: bytes) -> list[dict[str, str]]:
@@ -168,6 +168,30 @@ def test_returns_have_fat_tails_clusters_and_common_causes() -> None:
     apart = correlation[np.triu_indices(len(listed), 1)]
     assert 0.2 < np.median(apart) < 0.6
     assert correlation[listed.index("KESTERMANN"), listed.index("KESTERMANN-PREF")] > 0.95
+
+
+def test_the_range_of_a_day_holds_its_open_and_close_and_is_as_wide_as_its_returns() -> None:
+    """Parkinson (1980): the mean of ln(high / low)^2 / (4 ln 2) is the variance from open to close, for a random walk.
+
+    The range is that of four fifths of the day; what is left is between the close before and the open.
+    """
+    given = [*rows(story.start_files()["history.csv"])]
+    for evening in evenings():
+        given += rows(evening.files.get(f"prices_{evening.date}.csv", b""))
+    series: dict[str, list[list[float]]] = {}
+    for row in given:
+        series.setdefault(row["instrument"], []).append(
+            [float(row[field]) for field in ("close", "open", "high", "low")]
+        )
+    for item in PRICED:
+        close, first, high, low = np.array(series[item.id]).T
+        assert (low > 0).all()
+        assert (low <= np.minimum(first, close)).all() and (high >= np.maximum(first, close)).all()
+        whole = np.diff(np.log(close)).std()
+        within = math.sqrt(np.mean(np.log(high / low) ** 2) / (4 * math.log(2)))
+        night = np.log(first[1:] / close[:-1]).std()
+        assert within / whole == pytest.approx(math.sqrt(0.8), abs=0.06), item.id
+        assert night / whole == pytest.approx(math.sqrt(0.2), abs=0.06), item.id
 
 
 # What happens, worked out from the files alone by a second calculation
@@ -336,6 +360,34 @@ def test_trades_are_paid_for_so_that_nav_moves_with_the_market_alone() -> None:
             foreign = rates(currency)[:, new] / rates(currency)[:, old]
             gain = held * np.where(future, foreign * (local - 1), local * foreign - 1)
             assert nav - nav_before == pytest.approx(float(gain.sum()), abs=1e-9 * nav + 0.05), (book, day)
+
+
+def test_the_pnl_that_books_state_is_that_of_what_they_held_with_the_days_trades_and_without_their_cost() -> None:
+    """Held overnight, a book gains what its net asset value gains, for it trades at closes."""
+    unknown = {event.date.isoformat() for event in (*events_with("broken_nav"), *events_with("no_pnl"))}
+    stated: dict[str, dict[str, dict[str, str]]] = {}
+    for evening in evenings():
+        day = evening.date.isoformat()
+        for row in rows(evening.files.get(f"pnl_{day}.csv", b"")):
+            stated.setdefault(row["book"], {})[day] = row
+    fees, intraday = [], []
+    for book, (_, calendar) in BOOKS.items():
+        due = [evening.date for evening in evenings() if sessions.is_session(calendar, evening.date)]
+        days = [day.isoformat() for day in due]
+        absent = [day for day in days[1:] if day not in stated[book]]
+        assert absent == ["2025-10-21"] == [event.date.isoformat() for event in events_with("no_pnl")]
+        assert days[0] not in stated[book]  # nothing was held before
+        for before, day in pairwise(days):
+            if not {before, day} & unknown:
+                row, nav = stated[book][day], desk().nav[day][book]
+                held = float(row["actual"]) - float(row["intraday"]) + float(row["fees"])
+                assert held == pytest.approx(nav - desk().nav[before][book], abs=1e-9 * nav + 0.05), (book, day)
+                fees.append(float(row["fees"]) / nav)
+                intraday.append(float(row["intraday"]) / nav)
+    assert min(fees) == 0
+    assert 1e-5 < max(fees) < 1e-3
+    assert np.abs(intraday).max() < 0.002
+    assert np.mean(np.array(intraday) < 0) == pytest.approx(np.mean(np.array(intraday) > 0), abs=0.1)
 
 
 def test_books_have_their_size_and_trade_little_on_most_days() -> None:

@@ -18,6 +18,7 @@ from pathlib import Path
 import numpy as np
 
 from monitor.feed.build import build
+from monitor.feed.calendars import Sessions
 from monitor.feed.history import History
 from monitor.limits.evaluate import evaluate
 from monitor.run import open_for_checking, prepare
@@ -55,6 +56,15 @@ def _with_sessions() -> Path:
         history.sessions(calendar, until=FRIDAY)
     history.close()
     return path
+
+
+def sessions_worked_out(calendar: str) -> Sessions:
+    """In place of `calendars.from_library`, for tests that begin the cache anew."""
+    history = History(_with_sessions(), read=_nothing)
+    try:
+        return history.sessions(calendar, until=FRIDAY)
+    finally:
+        history.close()
 
 
 def _nothing(sha256: str) -> bytes:
@@ -105,12 +115,18 @@ class SmallSite:
         with open_for_checking(open_site(self.folder / "site.yaml")) as state:
             yield state, prepare(state, NOW)
 
-    def world(self, day: date = FRIDAY, known: int | None = None, round_id: str | None = None) -> World:
+    def world(
+        self, day: date = FRIDAY, known: int | None = None, round_id: str | None = None, ranges: bool = False
+    ) -> World:
+        """ranges: as if a rule needed opening, highest and lowest prices."""
         with self.state() as (state, terms):
             if known is None:
                 known = state.ledger.head().seq
             chosen = round_id or list(state.terms(terms).rounds)[-1]
-            return build(Recipe(day, chosen, day, day, day, terms, known), state.sources(day))
+            sources = state.sources(day)
+            if ranges:
+                sources = replace(sources, terms=lambda sha256: replace(state.terms(sha256), needs_ranges=True))
+            return build(Recipe(day, chosen, day, day, day, terms, known), sources)
 
     def standings(self, day: date = FRIDAY, round_id: str | None = None) -> Standings:
         return evaluate(self.world(day, round_id=round_id))

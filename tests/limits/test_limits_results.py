@@ -107,5 +107,5 @@ def test_what_is_not_a_number_is_never_a_result():
 def test_another_format_is_not_guessed_at():
     content = json.loads(results.encode(Standings((), (), (), (), ())))
 
-    with pytest.raises(ValueError, match="results of format 2"):
-        results.decode(json.dumps(content | {"format": 2}).encode())
+    with pytest.raises(ValueError, match="results of format 3"):
+        results.decode(json.dumps(content | {"format": 3}).encode())

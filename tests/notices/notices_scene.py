@@ -69,6 +69,7 @@ def make_answer(**changes: object) -> Answer:
         utilisation=1.04992,
         low=1_190_000.0,
         high=1_488_000.0,
+        unbounded=None,
         n=500,
         reason=None,
         marks=(),

@@ -74,6 +74,7 @@ def answer(
         rule=name, subject=subject, measure=measure, standing=standing, value=value, unit=unit, currency=currency,
         near=near, limit=limit, limit_below=None, side=Side.ABOVE, distance=distance, utilisation=used, low=low,
         high=high, n=n, reason=reason, marks=marks, how=how,
+        unbounded=None,
     )  # fmt: skip
 
 

@@ -181,7 +181,7 @@ def test_the_shape_and_the_parameters_are_checked():
         with pytest.raises(ValueError, match="zero, sample"):
             method(rows, NINETY_NINE, 1, "none")
     with pytest.raises(ValueError, match="normal, student_t"):
-        loss_probability(rows, np.array([1.0]), 1, "historical")
+        loss_probability(rows, np.array([1.0]), 1, "empirical")
     for decay in (0.0, 1.0, -0.5, float("nan")):
         with pytest.raises(ValueError, match="decay"):
             ewma(rows, decay)

@@ -6,11 +6,21 @@ from decimal import Decimal
 import numpy as np
 import pytest
 from scipy import stats
+from scipy.special import polygamma
 
 from monitor.risk.normal import fit_normal, normal
 from monitor.risk.probability import loss_probability
 from monitor.risk.student import student_t
-from monitor.risk.student_fit import NU_CEILING, NU_FLOOR, _derivatives, fit_student
+from monitor.risk.student_fit import (
+    NU_CEILING,
+    NU_FLOOR,
+    TIE_SHARE,
+    _climbing,
+    _derivatives,
+    _solved,
+    _trigamma,
+    fit_student,
+)
 from monitor.risk.tail import FitNote
 
 NINETY_NINE = Decimal("0.99")
@@ -202,3 +212,73 @@ def test_gradient_and_hessian_are_those_of_the_likelihood(nu, free):
                 - likelihood((i, -h), (j, h)) + likelihood((i, -h), (j, -h))
             ) / (4 * h * h)  # fmt: skip
             assert hessian[:, i, j] == pytest.approx(bend, rel=1e-3, abs=1e-4)
+
+
+@pytest.mark.parametrize("free", [False, True])
+def test_derivatives_are_the_same_in_memory_used_again(free):
+    rows = np.random.default_rng(13).standard_t(4, size=(5, 300))
+    at = np.tile([0.1, np.log(5.0), 0.2 if free else 0.0], (5, 1))
+    room = np.full((3, 9, 300), np.nan)
+    for fresh, again in zip(_derivatives(rows, at, free), _derivatives(rows, at, free, room[:, :5]), strict=True):
+        np.testing.assert_array_equal(fresh, again)
+
+
+def test_trigamma_is_scipys():
+    x = np.concatenate([np.linspace(1.0, 60.0, 500), [1e3, 1e4]])
+    assert _trigamma(x) == pytest.approx(polygamma(1, x), rel=1e-12)
+
+
+@pytest.mark.parametrize("parameters", [2, 3])
+def test_elimination_is_newtons_step_where_every_curvature_is_negative_and_says_so(parameters):
+    random = np.random.default_rng(14)
+    axes = np.linalg.qr(random.normal(size=(400, parameters, parameters)))[0]
+    curvature = random.uniform(-5, 1, size=(400, parameters))
+    hessian = (axes * curvature[:, np.newaxis, :]) @ axes.swapaxes(1, 2)
+    gradient = random.normal(size=(400, parameters))
+    with np.errstate(all="ignore"):
+        step, concave = _solved(gradient, hessian)
+    np.testing.assert_array_equal(concave, (curvature < 0).all(axis=1))
+    assert 0 < concave.sum() < 400
+    newton = -np.linalg.solve(hessian, gradient[:, :, np.newaxis])[:, :, 0]
+    np.testing.assert_allclose(step[concave], newton[concave], rtol=1e-8, atol=1e-8)
+    climbing = _climbing(gradient, hessian)
+    np.testing.assert_allclose(climbing[concave], newton[concave], rtol=1e-8, atol=1e-8)
+    assert ((climbing * gradient).sum(axis=1) > 0).all()
+
+
+@pytest.mark.parametrize("drift", ["zero", "sample"])
+@pytest.mark.parametrize("n", [250, 500, 1000])
+def test_ties_are_found_however_they_are_spread(drift, n):
+    """One value in just over a fifth of the scenarios, all together or evenly apart; opposite values are no tie."""
+    allowed = int(TIE_SHARE * n)
+    base = np.random.default_rng(15).standard_t(4, size=n)
+    rows, wanted = [], []
+    for places in (np.arange(n), np.arange(n)[::-1], np.random.default_rng(16).permutation(n)):
+        for count in (allowed, allowed + 1):
+            row = base.copy()
+            row[places[:count]] = 0.4
+            rows.append(row)
+            wanted.append(FitNote.NORMAL_FOR_TIES if count > allowed else FitNote.AS_ASKED)
+    opposite = base.copy()
+    opposite[: n // 2] = -base[n - n // 2 :]
+    mirrored = base.copy()
+    mirrored[: allowed * 2] = np.where(np.arange(allowed * 2) % 2 == 0, 0.4, -0.4)
+    fit = fit_student(np.stack([*rows, opposite, mirrored]), drift)
+    assert fit.note.tolist() == [*wanted, FitNote.AS_ASKED, FitNote.AS_ASKED]
+
+
+@pytest.mark.parametrize("drift", ["zero", "sample"])
+def test_a_long_row_is_fitted_the_same_alone_and_wherever_its_search_begins(drift):
+    """Long rows begin in pieces: another order of the same scenarios begins elsewhere and ends at the same maximum."""
+    rows = samples(4, 300, 1300, seed=17)
+    fit = fit_student(rows, drift)
+    for place in (0, 255, 256, 299):
+        alone = fit_student(rows[place : place + 1], drift)
+        assert (alone.nu[0], alone.scale[0], alone.location[0]) == (
+            fit.nu[place],
+            fit.scale[place],
+            fit.location[place],
+        )
+    ordered = fit_student(np.sort(rows, axis=1), drift)
+    np.testing.assert_allclose(ordered.nu, fit.nu, rtol=2e-9)
+    np.testing.assert_allclose(ordered.scale, fit.scale, rtol=1e-9)
