@@ -6,11 +6,10 @@ from collections.abc import Iterator
 from pathlib import Path
 
 from demo_feed import story
-from monitor import evenings
+from monitor import evenings, replay
 from monitor.evening import Checked, check_evening, recall
 from monitor.evenings import CheckedEvening
 from monitor.paging import draw_evening
-from monitor.replay import same_as_recorded
 from monitor.run import evenings_between, open_for_checking, prepare, send
 from monitor.site import open_site
 from monitor.state import State
@@ -54,10 +53,10 @@ def draw_last_pages(state: State) -> Path:
     return drawn[-1]
 
 
-def replayed(state: State) -> Iterator[tuple[CheckedEvening, bool]]:
-    """Every recorded evening, and whether its recipe gives the recorded results again."""
+def replayed(state: State) -> Iterator[tuple[CheckedEvening, replay.Replayed]]:
+    """Every recorded evening, and what its recipe gives again."""
     for own in evenings.latest_of_all(state.index()):
-        yield own, same_as_recorded(state, own)
+        yield own, replay.replayed(state, own)
 
 
 def _write(path: Path, data: bytes) -> None:

@@ -18,7 +18,8 @@ LAYERS = (
     {"risk"},
     {"limits", "feed", "excesses", "ledger"},
     {"notices", "report"},
-    {"site", "evenings", "settle", "state", "amend", "adoption", "news", "paging", "replay", "backtest", "evening"},
+    {"site", "evenings", "settle", "state", "amend", "adoption", "news", "paging"}
+    | {"replay", "backtest", "tracks", "evening"},
     {"run", "demonstration"},
     {"cli", "daemon"},
 )

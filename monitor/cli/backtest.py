@@ -2,31 +2,43 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from datetime import date
 from decimal import Decimal
 from pathlib import Path
+from string import ascii_lowercase
 from typing import Any
 
 import click
+from pydantic_core import PydanticCustomError
 from rich.console import Console
 from rich.progress import track
 from rich.table import Table
 
-from monitor.backtest import Backtest, Question, Record
+from monitor.backtest import Backtest, Record
 from monitor.backtest import backtest as run_backtest
 from monitor.cli.options import Day, json_option, print_json, site_option
 from monitor.limits.defaults import Defaults
 from monitor.limits.judgement import REJECTED_AT, Tested
-from monitor.limits.parameters import TAIL_METHODS, tail_measure
+from monitor.limits.parameters import TAIL_METHODS, tail_parameters
 from monitor.limits.wording import method_words
 from monitor.notices.figures import count
+from monitor.reading.fields import probability
+from monitor.reading.values import percent_of
 from monitor.site import open_site
 from monitor.state import open_state
-from monitor.words import WrongUse
+from monitor.tracks import Question
+from monitor.words import Subject, WrongUse
+from monitor.world import MeasureCall
 
 FIRM = "firm"
 DAYS_SHOWN = 12
+LEGEND = (
+    "over: exceptions, losses larger than value at risk; due: as many as a right forecast has on average. zone: the "
+    "Basel Committee's traffic light, for any number of days. Then p-values, * where a test rejects at 5 %: coverage "
+    "(Kupiec 1995), order (do exceptions come in clusters: Christoffersen 1998), both together, shortfall (Acerbi and "
+    "Szekely 2014, Z2), spread (the whole distribution, by Kolmogorov and Smirnov; indicative only)."
+)
 CAUTION = (
     "A good record is no promise: value at risk is not the worst case, few exceptions prove little, and none of this "
     "replaces the approved models and licensed people that local rules require."
@@ -76,14 +88,15 @@ def backtest(
         raise click.UsageError(f"--from {first} lies after --to {last}")
     site = open_site(site_file)
     _check_books(books, site.settings.book_ids())
-    calls = [tail_measure(_defaults(site.settings.defaults, window, confidence), method) for method in methods]
+    defaults = _defaults(site.settings.defaults, window, confidence)
+    calls = [_call(defaults, method) for method in methods]
     question = Question(tuple(calls) or None, books or None, positions, todays_positions, first, last)
     with open_state(site) as state:
         made = run_backtest(state, question, _silent if as_json else _bar)
     if as_json:
         print_json(_document(site.settings.site, made))
     else:
-        _print(made)
+        _print(site.settings.site, made)
 
 
 def _check_books(books: Sequence[str], known: Sequence[str]) -> None:
@@ -93,15 +106,22 @@ def _check_books(books: Sequence[str], known: Sequence[str]) -> None:
 
 
 def _defaults(defaults: Defaults, window: int | None, confidence: str | None) -> Defaults:
-    given: dict[str, Any] = {"window": window, "confidence": confidence}
+    given: dict[str, Any] = {"window": window, "confidence": None}
     if confidence is not None:
         try:
-            given["confidence"] = Decimal(confidence)
-        except ArithmeticError:
-            raise WrongUse(f"found the confidence {confidence!r}; expected a number such as 0.99") from None
-        if not Decimal("0.5") <= given["confidence"] < 1:
-            raise WrongUse(f"found the confidence {confidence}; expected one from 0.5 to below 1, such as 0.99")
+            given["confidence"] = probability("0.5")(percent_of(confidence) or Decimal(confidence))
+        except (ArithmeticError, PydanticCustomError):
+            expected = "one from 0.5 to below 1, such as 0.99 or 99 %"
+            raise WrongUse(f"found the confidence {confidence!r}; expected {expected}") from None
     return defaults.model_copy(update={key: value for key, value in given.items() if value is not None})
+
+
+def _call(defaults: Defaults, method: str) -> MeasureCall:
+    parameters = tail_parameters(method)
+    filled = parameters.filled(defaults)
+    for _, found, expected in parameters.contradictions(filled):
+        raise WrongUse(f"found {found}; expected {expected}")
+    return MeasureCall(parameters.name, filled)
 
 
 def _silent(things: Sequence[Any], _text: str) -> Iterable[Any]:
@@ -114,81 +134,99 @@ def _bar(things: Sequence[Any], text: str) -> Iterable[Any]:
     return track(things, description=text, console=console, transient=True) if console.is_terminal else things
 
 
-def _print(made: Backtest) -> None:
+def _print(site: str, made: Backtest) -> None:
     console = Console(highlight=False, markup=False, emoji=False)
     if not made.records:
         console.print("There is no evening with a next session in that span: nothing to hold a forecast against.")
         return
     on = "the positions of each evening" if made.positions_on is None else f"the positions of {made.positions_on}"
-    console.print(
-        f"One-day forecasts on {on}, against the next session. p: of the test named; below 5 % it rejects (*)."
-    )
-    console.print(_table(made.records))
-    for record in made.records:
-        for line in _remarks(record):
-            console.print(line)
-    for subject, sentence in made.sentences.items():
-        console.print(f"{subject.name}, newest window: {sentence}")
-    console.print(CAUTION)
+    console.print(f"{site}: one-day forecasts on {on}, held against the next session.")
+    for subject, records in _by_subject(made.records).items():
+        console.print(f"\n{subject.name}, in {records[0].currency}")
+        letters = {_letter(at): record for at, record in enumerate(records)}
+        for letter, record in letters.items():
+            reasons = ", ".join(record.asked.reasons)
+            console.print(f"  {letter}  {method_words(record.asked.call.parameters)} ({reasons})")
+        console.print(_table(letters))
+        for line in _remarks(letters):
+            console.print(f"  {line}")
+        if subject in made.sentences:
+            console.print(f"  The newest window: {made.sentences[subject]}")
+    console.print(f"\n{LEGEND}\n{CAUTION}")
 
 
-def _table(records: Sequence[Record]) -> Table:
-    table = Table(box=None, pad_edge=False)
-    for heading in ("subject", "method"):
-        table.add_column(heading, overflow="fold")
-    for heading in ("days", "exceptions", "expected", "zone", "coverage", "independence", "both", "shortfall", "whole"):
-        table.add_column(heading, justify="right" if heading != "zone" else "left")
-    shown = None
+def _letter(at: int) -> str:
+    """a to z, then a1, b1, ..."""
+    round_, place = divmod(at, len(ascii_lowercase))
+    return ascii_lowercase[place] + (str(round_) if round_ else "")
+
+
+def _by_subject(records: Sequence[Record]) -> dict[Subject, list[Record]]:
+    found: dict[Subject, list[Record]] = {}
     for record in records:
+        found.setdefault(record.subject, []).append(record)
+    return found
+
+
+def _table(letters: Mapping[str, Record]) -> Table:
+    table = Table(box=None, pad_edge=False)
+    table.add_column("  ", no_wrap=True)
+    for heading in ("days", "over", "due"):
+        table.add_column(heading, justify="right", no_wrap=True)
+    table.add_column("zone", no_wrap=True)
+    for heading in ("coverage", "order", "both", "shortfall", "spread"):
+        table.add_column(heading, justify="right", no_wrap=True)
+    for letter, record in letters.items():
         own = record.judgement
         table.add_row(
-            record.subject.name if record.subject != shown else "",
-            _method(record),
+            f"  {letter}",
             str(own.days),
             str(own.exceptions),
             f"{own.expected:.1f}",
-            own.zone if own.days else "",
+            own.zone or "-",
             *(_p(test) for test in (own.coverage, own.independence, own.conditional_coverage)),
             _p(Tested(own.shortfall.statistic, own.shortfall.p_value)),
             _p(own.distribution),
         )
-        shown = record.subject
     return table
-
-
-def _method(record: Record) -> str:
-    return f"{method_words(record.asked.call.parameters)} ({', '.join(record.asked.reasons)})"
 
 
 def _p(test: Tested) -> str:
     if test.p_value is None:
-        return "-"
-    return f"{test.p_value:.3f}{'*' if test.rejects else ' '}"
+        return "- "
+    said = "<0.001" if test.p_value < 0.001 else f"{test.p_value:.3f}"
+    return f"{said}{'*' if test.rejects else ' '}"
 
 
-def _remarks(record: Record) -> list[str]:
+def _remarks(letters: Mapping[str, Record]) -> Iterator[str]:
     """What a reader must know beyond the table: which days, what is missing, whose P&L."""
-    own = record.judgement
-    name = f"{record.subject.name}, {_method(record)}"
-    lines = []
-    if own.exception_days:
-        lines.append(f"{name}: exceptions on {_listed(own.exception_days)}")
-    if own.missing_days:
-        what = count(len(own.missing_days), "day")
-        lines.append(f"{name}: {what} without forecast or P&L: {_listed(own.missing_days)}")
-    if own.carried:
-        lines.append(f"{name}: {count(own.carried, 'day')} whose P&L rests in part on older prices or rates")
-    if own.exceptions_of["actual"] is not None:
-        both = f"{own.exceptions_of['hypothetical']} by hypothetical and {own.exceptions_of['actual']} by actual P&L"
-        lines.append(f"{name}: {both}; the count is by {own.counted_from} P&L")
-    if not own.days:
-        lines.append(f"{name}: no day counts yet: the window is not full, or nothing was measured")
-    return lines
+    judgements = {letter: record.judgement for letter, record in letters.items()}
+    exceptions = {letter: own.exception_days for letter, own in judgements.items()}
+    missing = {letter: own.missing_days for letter, own in judgements.items()}
+    if any(exceptions.values()):
+        yield f"Exceptions on {_listed(exceptions)}."
+    if any(missing.values()):
+        yield f"Without forecast or P&L: {_listed(missing)}."
+    carried = max(own.carried for own in judgements.values())
+    if carried:
+        yield f"{count(carried, 'day')} with a P&L that rests in part on older prices or rates."
+    for letter, own in judgements.items():
+        if own.exceptions_of["actual"] is not None:
+            both = f"{own.exceptions_of['hypothetical']} by hypothetical, {own.exceptions_of['actual']} by actual P&L"
+            yield f"{letter}: {both}; counted by {own.counted_from} P&L."
+    for reason in dict.fromkeys(reason for record in letters.values() for reason in record.reasons):
+        yield f"Missing: {reason}."
+    for letter, record in letters.items():
+        if not record.judgement.days and not record.reasons:
+            yield f"{letter}: no day counts yet: the window is not full, or nothing was measured."
 
 
-def _listed(days: Sequence[date]) -> str:
-    more = len(days) - DAYS_SHOWN
-    return ", ".join(str(day) for day in days[:DAYS_SHOWN]) + (f" and {more} more" if more > 0 else "")
+def _listed(days: Mapping[str, Sequence[date]]) -> str:
+    """The newest dates with the letters of the methods that they belong to."""
+    every = sorted({day for own in days.values() for day in own})
+    more = len(every) - DAYS_SHOWN
+    told = [f"{day} {''.join(letter for letter, own in days.items() if day in own)}" for day in every[-DAYS_SHOWN:]]
+    return (f"{more} earlier days, " if more > 0 else "") + ", ".join(told)
 
 
 def _document(site: str, made: Backtest) -> dict[str, Any]:
@@ -219,6 +257,7 @@ def _record_document(record: Record, sentence: str | None) -> dict[str, Any]:
         "exceptions_of": own.exceptions_of,
         "exception_days": [str(day) for day in own.exception_days],
         "missing_days": [str(day) for day in own.missing_days],
+        "why_missing": list(record.reasons),
         "days_on_older_prices": own.carried,
         "zone": own.zone,
         "probability_of_as_many": own.at_least,

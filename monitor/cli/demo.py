@@ -10,6 +10,7 @@ from rich.console import Console
 from rich.progress import track
 
 from monitor.cli.screen import print_evening
+from monitor.notices.figures import count
 from monitor.words import Exit
 
 
@@ -47,14 +48,15 @@ def demo(folder: Path) -> int:
             console.print(f"  {event.date}  {event.text}")
         console.print()
         print_evening(state, checked[-1], [own.standings.outcome for own in checked])
-    differing = [str(own.recipe.date) for own, same in again if not same]
+    differing = [str(own.recipe.date) for own, found in again if found.differences]
+    exact = sum(found.exact for _, found in again)
     counts = Counter(own.state.value for own in register)
     excesses = ", ".join(f"{number} {word}" for word, number in sorted(counts.items()))
     console.print()
     console.print(f"Excesses over the year: {len(register)} ({excesses}). Notices sent: {sent}.")
-    console.print(
-        f"Replayed from the archive: {len(again) - len(differing)} of {len(again)} evenings, exactly as recorded."
-    )
+    console.print(f"Replayed from the archive: {exact} of {len(again)} evenings, exactly as recorded.")
+    if rounded := len(again) - exact - len(differing):
+        console.print(f"{count(rounded, 'further evening')} the same within the stated tolerance of each measure.")
     console.print()
     console.print("Where to look:")
     console.print(f"  the last evening's page   {page}", soft_wrap=True)

@@ -9,10 +9,10 @@ import numpy as np
 from monitor.limits.measured import Measured, Parameters
 from monitor.limits.slices import Slice
 from monitor.limits.wholes import whole_of
-from monitor.limits.windowed import how_of, short_mark, tail_call
+from monitor.limits.windowed import WORST_FOR_MEAN, how_of, short_mark, tail_call, tail_notes
 from monitor.risk.components import marginal as marginal_of
 from monitor.risk.figures import LACK_TEXT, Lack
-from monitor.risk.methods import incremental_tail, tail_components
+from monitor.risk.methods import incremental_tail, measure_tail, tail_components
 from monitor.words import Mark, MarkKind, Unit
 from monitor.world import Floats, Integers
 
@@ -28,6 +28,7 @@ def component(part: Slice, parameters: Parameters, _unit: Unit) -> Measured:
     measured = _blank(part, parameters)
     for places, positions, rows in _by_whole(part, parameters, measured):
         made = tail_components(rows, tail_call(parameters), parameters["of"])
+        _note(measured, places, rows, parameters)
         lack, factor = Lack(int(made.lack[0])), float(made.factor[0])
         values = np.zeros(len(part.exposure))
         values[positions] = made.component
@@ -64,8 +65,17 @@ def incremental(part: Slice, parameters: Parameters, _unit: Unit) -> Measured:
     for places, _, rows in _by_whole(part, parameters, measured):
         own = scenarios[places, scenarios.shape[1] - rows.shape[1] :]
         figures = incremental_tail(rows.sum(axis=0), own, tail_call(parameters), parameters["of"])
+        _note(measured, places, rows, parameters)
         measured.fill(np.array(places, dtype=np.int64), figures)
     return measured
+
+
+def _note(measured: Measured, places: list[int], rows: Floats, parameters: Parameters) -> None:
+    """Mark subjects where the figure of their book is not made as the rule asks."""
+    inexact = WORST_FOR_MEAN if parameters["of"] == "expected_shortfall" else None
+    for text in tail_notes(measure_tail(rows.sum(axis=0)[np.newaxis, :], tail_call(parameters)), inexact).values():
+        for at in places:
+            measured.mark(at, [Mark(MarkKind.METHOD, text)])
 
 
 def _blank(part: Slice, parameters: Parameters) -> Measured:
@@ -82,12 +92,12 @@ def _by_whole(part: Slice, parameters: Parameters, measured: Measured) -> Iterat
     window = parameters["window"]
     books: dict[str | None, list[int]] = {}
     for at, subject in enumerate(part.members.subjects):
-        books.setdefault(subject.book, []).append(at)
+        books.setdefault(None if part.of_firm else subject.book, []).append(at)
     for book, places in books.items():
         whole = whole_of(part, book)
         used = whole.sessions_used(window)
         n, positions = int(used[0]), whole.members.position
-        troubles = whole.exposure_troubles() | whole.window_troubles(window, used)
+        troubles = whole.window_troubles(window, used) | whole.exposure_troubles()
         missing = [reason for name, reason in part.world.holdings.missing.items() if book in (None, name)]
         reason = next(iter([*missing, *troubles.values()]), None)
         for at in places:

@@ -7,7 +7,7 @@ from collections.abc import Collection, Iterator
 from monitor.limits.coverage import figures_of_books, find_uncovered, find_unmeasured
 from monitor.limits.measured import Measured, divide
 from monitor.limits.measures import MEASURES
-from monitor.limits.slices import Slice, shortened
+from monitor.limits.slices import Slice, shortened, within_firm
 from monitor.limits.subjects import Members, books_under, members_of, with_past
 from monitor.limits.valuation import Valuation
 from monitor.words import Mark, Side, Standing, Subject, Unit
@@ -50,8 +50,9 @@ def _answers(rule: Rule, members: Members, valuation: Valuation) -> Iterator[Ans
     of_firm = (rule.currency or firm.base_currency, firm.calendar)
     slices: dict[tuple[str, str], list[int]] = {}
     for at, subject in enumerate(members.subjects):
-        if world.scope.holds(subject.book):
-            slices.setdefault(of_book[subject.book] if subject.book else of_firm, []).append(at)
+        book = None if within_firm(rule) else subject.book
+        if world.scope.holds(book):
+            slices.setdefault(of_book[book] if book else of_firm, []).append(at)
     found: dict[int, Answer] = {}
     for (currency, calendar), places in slices.items():
         part = Slice(valuation, rule, members.only(places), currency, calendar)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from datetime import date
 from decimal import Decimal
@@ -30,13 +30,14 @@ from monitor.risk.rolling import rolling_historical
 from monitor.risk.shortfall_test import critical_value, p_value, shortfall_test, simulate_z2
 from monitor.risk.student_fit import fit_student
 from monitor.risk.transform import kolmogorov_smirnov
-from monitor.world import Floats, MeasureCall, RecordTerms
+from monitor.world import Booleans, Floats, Integers, MeasureCall, RecordTerms
 
 REJECTED_AT = 0.05
 Z2_PATHS = 20_000
 # Student's t that the critical values of Z2 are simulated for: the fitted degrees of freedom, rounded down to one of
 # these, so that the tail is never taken as thinner than it was found.
 Z2_TAILS = (3.0, 4.0, 5.0, 7.0, 10.0, 20.0, 100.0)
+HYPOTHETICAL, ACTUAL = "hypothetical", "actual"  # whose P&L
 NO_TRANSFORM = "only the figures are known, not the whole distribution"
 
 
@@ -51,20 +52,26 @@ class Forecasts:
     expected_shortfall: Floats
     transform: Floats | None
 
+    def on(self, days: Booleans) -> Forecasts:
+        """Those of some of the records."""
+        places = None if self.transform is None else self.transform[days]
+        return Forecasts(self.value_at_risk[days], self.expected_shortfall[days], places)
+
 
 @dataclass(frozen=True)
 class Trials:
     """Forecasts and outcomes of one subject under one method, in time order, profit positive.
 
-    days: of the outcomes. pnl: hypothetical, actual: the book's own; NaN where not known. carried: how many of the
-    outcomes rest in part on older prices.
+    days: of the outcomes. pnl: hypothetical, actual: the book's own; NaN where not known. carried: whether pnl rests in
+    part on older prices. asked: the days to judge; the others only tell whether forecasts had begun before them.
     """
 
     days: tuple[date, ...]
     forecasts: Forecasts
     pnl: Floats
     actual: Floats
-    carried: int
+    carried: Booleans
+    asked: Booleans
 
 
 @dataclass(frozen=True)
@@ -96,7 +103,9 @@ class Judgement:
     """The record of one method for one subject. days: those that count; expected: exceptions of a right forecast.
 
     counted_from: whose P&L gave the count, hypothetical or actual. exceptions_of: the count by each, None where a P&L
-    is not known on any day. zone: of the Basel Committee's traffic light, any number of days.
+    is not known on any day. missing_days: without forecast or P&L, whether they count or not. carried: days that count
+    whose hypothetical P&L rests in part on older prices. zone: of the Basel Committee's traffic light, any number of
+    days; None without one.
     """
 
     days: int
@@ -109,7 +118,7 @@ class Judgement:
     exception_days: tuple[date, ...]
     missing_days: tuple[date, ...]
     carried: int
-    zone: str
+    zone: str | None
     at_least: float
     transitions: tuple[int, int, int, int]
     coverage: Tested
@@ -140,7 +149,7 @@ class QuickForecast:
     value_at_risk: Floats
     expected_shortfall: Floats
 
-    def of(self, place: int, ends: np.ndarray, scenarios: Floats, outcomes: Floats) -> Forecasts:
+    def of(self, place: int, ends: Integers, scenarios: Floats, outcomes: Floats) -> Forecasts:
         """The forecasts of one series from the windows that end on some days, as `forecast` gives them."""
         rows = ends - self.call.parameters["window"] + 1
         places = transform_outcomes(outcomes, scenarios, tail_call(self.call.parameters))
@@ -164,22 +173,25 @@ def describe(pnl: Floats) -> tuple[str, ...]:
 
 
 def judge(trials: Trials, call: MeasureCall, terms: RecordTerms, site: str) -> Judgement:
-    """Everything that the record of one method for one subject says."""
+    """Everything that the record of one method for one subject says.
+
+    Days before the first forecast don't count, and by actual P&L neither do days before the first that is known; later
+    ones without forecast or P&L are missing. A subject without any actual P&L, as every position and the firm, is
+    judged by the hypothetical one whatever the terms say.
+    """
     confidence: Decimal = call.parameters["confidence"]
-    forecasts = trials.forecasts
-    var = forecasts.value_at_risk[np.newaxis, :]
-    known = {"hypothetical": trials.pnl, "actual": trials.actual}
-    by = {name: find_exceptions(own[np.newaxis, :], var, terms.missing_counts) for name, own in known.items()}
-    there = {name: bool(np.isfinite(own).any()) for name, own in known.items()}
-    from_actual = _from_actual(by, there, terms)
-    name = "actual" if from_actual else "hypothetical"
-    found, pnl = by[name], known[name]
+    asked = trials.asked
+    known = {HYPOTHETICAL: trials.pnl, ACTUAL: trials.actual}
+    by = {name: _exceptions(name, own, trials, terms) for name, own in known.items()}
+    there = {name: bool(np.isfinite(own[asked]).any()) for name, own in known.items()}
+    name = _counted_from(by, there[ACTUAL], terms)
+    found, pnl, forecasts = by[name], known[name][asked], trials.forecasts.on(asked)
     covered = kupiec(found.exceptions, found.days, confidence)
     counts = transitions(found.hit, found.counted)
     independent = christoffersen(counts, covered)
     zone = basel_zone(found.exceptions, found.days, confidence)
     days = int(found.days[0])
-    counted = [day for day, counts_here in zip(trials.days, found.counted[0], strict=True) if counts_here]
+    counted = _days(trials, found.counted)
     until = int(found.days_until_first[0])
     return Judgement(
         days=days,
@@ -189,10 +201,10 @@ def judge(trials: Trials, call: MeasureCall, terms: RecordTerms, site: str) -> J
         expected=float(1 - confidence) * days,
         counted_from=name,
         exceptions_of={own: int(by[own].exceptions[0]) if there[own] else None for own in known},
-        exception_days=_days(trials, found.hit[0]),
-        missing_days=_days(trials, found.missing[0]),
-        carried=trials.carried,
-        zone=Zone(int(zone.zone[0])).name.lower(),
+        exception_days=_days(trials, found.hit),
+        missing_days=_days(trials, found.missing),
+        carried=int((found.counted[0] & trials.carried[asked]).sum()),
+        zone=Zone(int(zone.zone[0])).name.lower() if days else None,
         at_least=float(zone.at_least[0]),
         transitions=(int(counts.t00[0]), int(counts.t01[0]), int(counts.t10[0]), int(counts.t11[0])),
         coverage=_tested(covered),
@@ -205,15 +217,29 @@ def judge(trials: Trials, call: MeasureCall, terms: RecordTerms, site: str) -> J
     )
 
 
-def _from_actual(by: dict[str, Exceptions], there: dict[str, bool], terms: RecordTerms) -> bool:
-    """Whether the books' own P&L gives the count."""
-    if terms.pnl == "larger" and there["actual"]:
-        return bool(larger_count(by["actual"], by["hypothetical"]).from_actual[0])
-    return terms.pnl == "actual"
+def _exceptions(name: str, pnl: Floats, trials: Trials, terms: RecordTerms) -> Exceptions:
+    """Those on the days asked for, by one kind of P&L."""
+    var = trials.forecasts.value_at_risk
+    if name == ACTUAL:
+        var = np.where(np.logical_or.accumulate(np.isfinite(pnl)), var, np.nan)
+    found = find_exceptions(pnl[np.newaxis, :], var[np.newaxis, :], terms.missing_counts)
+    asked = trials.asked
+    return Exceptions(found.hit[:, asked], found.counted[:, asked], found.missing[:, asked])
 
 
-def _days(trials: Trials, chosen: np.ndarray) -> tuple[date, ...]:
-    return tuple(day for day, own in zip(trials.days, chosen.tolist(), strict=True) if own)
+def _counted_from(by: Mapping[str, Exceptions], actual_known: bool, terms: RecordTerms) -> str:
+    """Whose P&L gives the count."""
+    if not actual_known or terms.pnl == HYPOTHETICAL:
+        return HYPOTHETICAL
+    if terms.pnl == ACTUAL:
+        return ACTUAL
+    return ACTUAL if larger_count(by[ACTUAL], by[HYPOTHETICAL]).from_actual[0] else HYPOTHETICAL
+
+
+def _days(trials: Trials, chosen: Booleans) -> tuple[date, ...]:
+    """chosen: (1, days asked for)."""
+    asked = [day for day, own in zip(trials.days, trials.asked.tolist(), strict=True) if own]
+    return tuple(day for day, own in zip(asked, chosen[0].tolist(), strict=True) if own)
 
 
 def _tested(verdict: Verdict) -> Tested:

@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from decimal import Decimal
-from typing import Annotated
+from typing import Annotated, Any
 
 from pydantic import PlainValidator
 
@@ -29,6 +29,10 @@ COMPONENT_METHODS = ("historical", "age_weighted", "volatility_scaled", "normal"
 PROBABILITY_METHODS = ("normal", "student_t", "historical")
 RANGE_METHODS = ("parkinson", "garman_klass")
 VOLATILITY_METHODS = ("sample", "ewma", "garch", *RANGE_METHODS)
+# As in `risk`, which reading rules need not load.
+LEAST_EXCEEDANCES = 20  # of peaks_over_threshold
+LEAST_IN_TAIL = 10  # paths of monte_carlo
+LARGEST_INDEX_SHARE = "0.2"  # of tail_index
 LATER_PARAMETERS = {
     "participation": "the share of traded volume",
     "reference": "a reference portfolio",
@@ -58,10 +62,13 @@ Horizon = Annotated[str, PlainValidator(one_of(("square_root", "overlapping")))]
 Scaling = Annotated[str, PlainValidator(one_of(("ewma", "garch")))]
 Fit = Annotated[str, PlainValidator(one_of(("likelihood", "kurtosis")))]
 TailShare = Annotated[Decimal, PlainValidator(probability("0.01", "0.5", "a share", "0.1 or 10 %"))]
+IndexShare = Annotated[Decimal, PlainValidator(probability("0.01", LARGEST_INDEX_SHARE, "a share", "0.1 or 10 %"))]
+Whole = Annotated[str, PlainValidator(one_of(("book", "firm")))]
 Distribution = Annotated[str, PlainValidator(one_of(("normal", "student_t")))]
 Paths = Annotated[int, PlainValidator(whole(10_000, 1_000_000))]
 TailName = Annotated[str, PlainValidator(one_of(("value_at_risk", "expected_shortfall")))]
 Contradiction = tuple[str, str, str]
+Filled = Mapping[str, Any]
 
 
 class Parameters(Shape):
@@ -74,8 +81,11 @@ class Parameters(Shape):
         given = {key: getattr(self, key) for key in self.written_keys() if key != "name" and self._goes(key)}
         return {key: getattr(defaults, key, None) if value is None else value for key, value in given.items()}
 
-    def contradictions(self) -> Iterator[Contradiction]:
-        """Parameters that do not go with others: the key, what was found, what was expected."""
+    def contradictions(self, filled: Filled) -> Iterator[Contradiction]:
+        """Parameters that do not go with others: the key, what was found, what was expected.
+
+        filled: all of them, the site's defaults where the rule is silent.
+        """
         for key, fitting in GOES_WITH.items():
             if key in self.model_fields_set and not self._goes(key):
                 known = [name for name in fitting if name in self._methods()]
@@ -121,11 +131,15 @@ class TailParameters(Parameters):
             parameters.pop("decay")
         return parameters
 
-    def contradictions(self) -> Iterator[Contradiction]:
-        yield from super().contradictions()
+    def contradictions(self, filled: Filled) -> Iterator[Contradiction]:
+        yield from super().contradictions(filled)
         yield from _decays(self.method, self.scaling, self.decay)
-        if self.horizon == "overlapping" and self.window is not None and self.window <= self.horizon_days:
-            yield "horizon", f"a horizon of {self.horizon_days} days in a window of {self.window}", "a longer window"
+        if filled.get("horizon") == "overlapping":
+            yield from _too_long(self.horizon_days, filled["window"])
+        if self.method == "peaks_over_threshold":
+            yield from _too_few_peaks(filled["window"], self.tail_share)
+        if self.method == "monte_carlo":
+            yield from _too_few_paths(self.paths, filled["confidence"])
 
 
 def _decays(method: str, scaling: str, decay: float | None) -> Iterator[Contradiction]:
@@ -135,25 +149,43 @@ def _decays(method: str, scaling: str, decay: float | None) -> Iterator[Contradi
         yield "decay", "a decay with the scaling garch", "no decay, or the scaling ewma"
 
 
+def _too_long(days: int, window: int) -> Iterator[Contradiction]:
+    if window <= days:
+        yield "horizon", f"a horizon of {days} days in a window of {window}", "a longer window"
+
+
+def _too_few_peaks(window: int, tail_share: Decimal) -> Iterator[Contradiction]:
+    if (peaks := int(tail_share * window)) < LEAST_EXCEEDANCES:
+        found = f"peaks_over_threshold with {peaks} sessions beyond the threshold in a window of {window}"
+        yield "method", found, f"at least {LEAST_EXCEEDANCES}: a longer window or a larger tail_share"
+
+
+def _too_few_paths(paths: int, confidence: Decimal) -> Iterator[Contradiction]:
+    if (1 - confidence) * paths < LEAST_IN_TAIL:
+        found = f"monte_carlo with less than {LEAST_IN_TAIL} of {paths:,} paths beyond a confidence of {confidence}"
+        yield "method", found, "more paths, or a lower confidence"
+
+
 def default_tail(defaults: Defaults) -> MeasureCall:
     """The value at risk that a page shows of every book, whatever the rules say."""
-    return tail_measure(defaults, "historical")
+    parameters = tail_parameters("historical")
+    return MeasureCall(parameters.name, parameters.filled(defaults))
 
 
-def tail_measure(defaults: Defaults, method: str) -> MeasureCall:
-    """Value at risk by a method, everything else as the site's defaults say; age-weighted with a decay of 0.995.
+def tail_parameters(method: str) -> TailParameters:
+    """Value at risk by a method that nothing more is said of; age-weighted with the decay of Hull's example, 0.995.
 
-    The decay is that of Hull's example (RMFI 4e, ch. 13).
+    Hull, Risk Management and Financial Institutions, 4th ed., ch. 13.
     """
-    name = "value_at_risk"
-    decay = {"decay": 0.995} if method == "age_weighted" else {}
-    return MeasureCall(name, TailParameters.model_validate({"name": name, "method": method, **decay}).filled(defaults))
+    decay = {"decay": Decimal("0.995")} if method == "age_weighted" else {}
+    return TailParameters.model_validate({"name": "value_at_risk", "method": method, **decay})
 
 
 class ComponentParameters(Parameters):
-    """What a subject adds to the figure `of` the book, or the firm, that it lies in."""
+    """What a subject adds to the figure `of` the book that it lies in, or of the firm."""
 
     of: TailName = "value_at_risk"
+    within: Whole = "book"
     method: ComponentMethod = "historical"
     confidence: Confidence | None = None
     horizon_days: HorizonDays = 1
@@ -168,8 +200,8 @@ class ComponentParameters(Parameters):
             parameters.pop("decay")
         return parameters
 
-    def contradictions(self) -> Iterator[Contradiction]:
-        yield from super().contradictions()
+    def contradictions(self, filled: Filled) -> Iterator[Contradiction]:
+        yield from super().contradictions(filled)
         yield from _decays(self.method, self.scaling, self.decay)
         if self.name != "incremental" and self.method == "age_weighted" and self.of == "value_at_risk":
             yield (
@@ -177,6 +209,10 @@ class ComponentParameters(Parameters):
                 "age_weighted with of: value_at_risk, a single scenario that has no components",
                 "of: expected_shortfall, or another method",
             )
+
+    def misfits(self, each: str | None, unit: Unit) -> Iterator[Contradiction]:
+        if each == "book" and self.within == "book":
+            yield "name", f"the {self.name} of a book within itself", "`within: firm`, or another `each`"
 
     def _methods(self) -> tuple[str, ...]:
         return COMPONENT_METHODS
@@ -202,7 +238,7 @@ class VolatilityParameters(Parameters):
 class TailIndexParameters(Parameters):
     """`tail_share`: the share of the scenarios, the worst ones, that the index is estimated from."""
 
-    tail_share: TailShare = Decimal("0.1")
+    tail_share: IndexShare = Decimal("0.1")
     window: WindowLength | None = None
 
 
@@ -221,8 +257,8 @@ class LossProbabilityParameters(Parameters):
         threshold = self.threshold.fraction if isinstance(self.threshold, Percent) else self.threshold
         return {**super().filled(defaults), "threshold": float(threshold), "of": self.of}
 
-    def contradictions(self) -> Iterator[Contradiction]:
-        yield from super().contradictions()
+    def contradictions(self, filled: Filled) -> Iterator[Contradiction]:
+        yield from super().contradictions(filled)
         if isinstance(self.threshold, Percent) and self.of is None:
             yield "threshold", f"the percentage {self.threshold} of nothing", "`of: nav` or `of: gross` beside it"
         if not isinstance(self.threshold, Percent) and self.of is not None:

@@ -50,7 +50,7 @@ def _read_challenger(document: Document, defaults: Defaults) -> MeasureCall | No
     parameters = document.shape(at, Challenger)
     if parameters is None:
         return None
-    for key, found, expected in parameters.contradictions():
+    for key, found, expected in parameters.contradictions(parameters.filled(defaults)):
         if document.sound_below(at):
             document.refuse((*at, key), expected, found)
     return MeasureCall(parameters.name, parameters.filled(defaults)) if document.sound_below(at) else None

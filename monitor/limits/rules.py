@@ -122,7 +122,7 @@ def _read_rule(document: Document, path: Path, context: RuleContext) -> Rule | N
     selectors = read_selectors(document, (*path, "applies_to"), context) if "applies_to" in written else ()
     if "each" in written:
         check_each(document, (*path, "each"))
-    measure, parameters = _read_measure(document, (*path, "measure")) if "measure" in written else (None, None)
+    measure, parameters = _read_measure(document, (*path, "measure"), context) if "measure" in written else (None, None)
     first, last = _in_force(document, (*path, "in_force")) if "in_force" in written else (None, None)
     document.refuse_unknown((*path, "tell"), context.groups, "groups")
     _check_owner(document, (*path, "owner"), context)
@@ -161,7 +161,7 @@ def _read_rule(document: Document, path: Path, context: RuleContext) -> Rule | N
     return rule if shape.title else replace(rule, title=made_title(rule))
 
 
-def _read_measure(document: Document, path: Path) -> tuple[Measure | None, Parameters | None]:
+def _read_measure(document: Document, path: Path, context: RuleContext) -> tuple[Measure | None, Parameters | None]:
     """The measure that a rule names and its parameters; None for what could not be read."""
     written = document.at(path)
     if written is UNREADABLE:
@@ -180,7 +180,7 @@ def _read_measure(document: Document, path: Path) -> tuple[Measure | None, Param
     measure = MEASURES[name]
     parameters = document.shape(path, measure.parameters, LATER_PARAMETERS)
     if parameters is not None:
-        _check_parameters(document, path, parameters)
+        _check_parameters(document, path, parameters, context)
     return measure, parameters
 
 
@@ -195,8 +195,8 @@ def _refuse_measure(document: Document, path: Path) -> None:
         document.refuse(path, expected, f"the unknown measure {shown(name)}", near=(name, MEASURES))
 
 
-def _check_parameters(document: Document, path: Path, parameters: Parameters) -> None:
-    for key, found, expected in parameters.contradictions():
+def _check_parameters(document: Document, path: Path, parameters: Parameters, context: RuleContext) -> None:
+    for key, found, expected in parameters.contradictions(parameters.filled(context.defaults)):
         if document.sound_below(path):
             document.refuse((*path, key), expected, found)
 

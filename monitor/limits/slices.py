@@ -36,13 +36,17 @@ class Denominator:
 
 @dataclass(frozen=True)
 class Slice:
-    """Everything that a measure may ask about its subjects. Arrays are (subjects,) unless said otherwise."""
+    """Everything that a measure may ask about its subjects. Arrays are (subjects,) unless said otherwise.
+
+    bounded: whether figures are wanted with their sampling bounds, which cost more than the figures.
+    """
 
     valuation: Valuation
     rule: Rule
     members: Members
     currency: str
     calendar: str
+    bounded: bool = True
 
     @property
     def world(self) -> World:
@@ -51,6 +55,11 @@ class Slice:
     @property
     def size(self) -> int:
         return len(self.members.subjects)
+
+    @property
+    def of_firm(self) -> bool:
+        """Whether subjects are measured within the firm, whatever book they lie in."""
+        return within_firm(self.rule)
 
     @cached_property
     def exposure(self) -> Floats:
@@ -76,9 +85,13 @@ class Slice:
         returns = self.valuation.log_returns(self.calendar, self.currency)
         return returns[:, max(returns.shape[1] - window, 0) :]
 
-    def ranges(self, sessions: int, subjects: Integers) -> tuple[Floats, Floats, Floats, Floats]:
-        """Opens, highs, lows and closes of the newest sessions, (k, sessions), of subjects of one position each."""
-        found = self.world.windows[self.calendar].ranges
+    def ranges(self, sessions: int, subjects: Integers) -> tuple[Floats, Floats, Floats, Floats, Booleans]:
+        """Opens, highs, lows and closes of the newest sessions, (k, sessions), of subjects of one position each.
+
+        And the sessions that count: not those on which the instrument's own market was closed.
+        """
+        window = self.world.windows[self.calendar]
+        found = window.ranges
         if found is None:
             raise RuntimeError("a world without the day's ranges was asked for them")
         instruments = self.world.holdings.instrument[self.members.position[subjects]]
@@ -86,16 +99,17 @@ class Slice:
         opened, high, low, close = (
             matrix[instruments, newest] for matrix in (found.open, found.high, found.low, found.close)
         )
-        return opened, high, low, close
+        return opened, high, low, close, ~np.isnan(close) | window.gap[instruments, newest]
 
     def last_session(self) -> LastSession:
         return self.valuation.last_session(self.calendar, self.currency)
 
     def denominator(self, name: str) -> Denominator:
-        """The NAV or the gross exposure of the book (or the firm) that each subject lies in."""
+        """The NAV or the gross exposure of the book that each subject lies in, or of the firm."""
         ask = self._nav if name == "nav" else self._gross
-        of_book = {book: ask(book) for book in {item.book for item in self.members.subjects}}
-        found = [of_book[subject.book] for subject in self.members.subjects]
+        books = [None if self.of_firm else subject.book for subject in self.members.subjects]
+        of_book = {book: ask(book) for book in set(books)}
+        found = [of_book[book] for book in books]
         values = np.array([value for value, _, _ in found], dtype=np.float64)
         return Denominator(values, [reason for _, reason, _ in found], [doubts for _, _, doubts in found])
 
@@ -221,6 +235,11 @@ class Slice:
         place, carried = self.world.market.currency_index(), self.world.market.rate_carried
         old = [code for code in (currency, self.currency) if carried[place[code]]]
         return [Mark(MarkKind.CARRIED, f"an older FX rate of {code}") for code in old]
+
+
+def within_firm(rule: Rule) -> bool:
+    """Whether a rule measures what its subjects are within the firm, whatever book they lie in."""
+    return rule.measure.parameters.get("within") == "firm"
 
 
 def stray_marks(names: Iterable[str]) -> list[Mark]:

@@ -48,14 +48,19 @@ class Outcome:
 class Series:
     """What tonight's positions would have made on every session known, (subjects, sessions), oldest first.
 
-    fit: by window, (subjects, sessions) whether enough of the window that ends there is known for a forecast.
+    carried: (subjects, sessions) it rests in part on an older price or rate. sessions: (subjects,) since the first
+    return of any position. fit: by window, (subjects, sessions) whether enough of the window that ends there is known
+    for a forecast. reasons: for each subject why no forecast can be made at all, or None.
     """
 
     subjects: tuple[Subject, ...]
     currency: str
     calendar: str
     pnl: Floats
+    carried: Booleans
+    sessions: Integers
     fit: Mapping[int, Booleans]
+    reasons: list[str | None]
 
 
 def observe(valuation: Valuation, windows: Collection[int], positions: bool) -> Iterator[Observation]:
@@ -68,7 +73,7 @@ def observe(valuation: Valuation, windows: Collection[int], positions: bool) -> 
             calendar=part.calendar,
             pnl=np.asarray(part.members.sum(part.scenarios(longest).pnl)),
             sessions=part.sessions_used(longest),
-            reasons={window: _reasons(part, window) for window in windows},
+            reasons={window: _reasons(part, _troubles(part, window)) for window in windows},
         )
 
 
@@ -89,24 +94,40 @@ def series(valuation: Valuation, windows: Collection[int], positions: bool) -> I
     """Each book and the firm with tonight's positions over all of the past, and each position where asked for."""
     for part in _parts(valuation, positions):
         made = valuation.scenarios(part.calendar, part.currency)
-        lacks = np.cumsum(made.lacks & ~made.riskless[:, None], axis=1, dtype=np.int32)
-        fit = {}
-        for window in windows:
-            within = lacks.copy()
-            within[:, window:] -= lacks[:, :-window]
-            unfit = within > (1 - LEAST_OF_WINDOW) * window
-            fit[window] = np.asarray(part.members.sum(unfit.astype(np.float64)) == 0)
-            fit[window][:, : window - 1] = False
-        for at in part.exposure_troubles():
-            for known in fit.values():
-                known[part.members.owner[part.members.position == at]] = False
+        count = made.pnl.shape[1]
+        lacks = made.lacks & ~made.riskless[:, None]
+        carried = lacks.copy()
+        carried[:, 1:] |= lacks[:, :-1]
+        sessions = part.sessions_used(count)
+        reasons = _reasons(part, part.exposure_troubles())
+        begins = np.where([reason is None for reason in reasons], count - sessions, count)
         yield Series(
             subjects=part.members.subjects,
             currency=part.currency,
             calendar=part.calendar,
             pnl=np.asarray(part.members.sum(made.pnl)),
-            fit=fit,
+            carried=_any_of(part, carried),
+            sessions=sessions,
+            fit={window: _fit(part, lacks, begins, window) for window in windows},
+            reasons=reasons,
         )
+
+
+def _fit(part: Slice, lacks: Booleans, begins: Integers, window: int) -> Booleans:
+    """(subjects, sessions) whether a window that ends there is full, and each position has enough returns in it.
+
+    lacks: (positions, sessions). begins: (subjects,) the first session that may lie in a window.
+    """
+    within = np.cumsum(lacks, axis=1, dtype=np.int32)
+    within[:, window:] -= within[:, :-window].copy()
+    unfit = window - within < LEAST_OF_WINDOW * window
+    full = np.arange(lacks.shape[1]) >= begins[:, None] + window - 1
+    return np.asarray(full & ~_any_of(part, unfit))
+
+
+def _any_of(part: Slice, positions: Booleans) -> Booleans:
+    """(positions, n) to (subjects, n): whether it holds of any position of the subject."""
+    return np.asarray(part.members.sum(positions.astype(np.float64)) > 0)
 
 
 def _parts(valuation: Valuation, positions: bool) -> Iterator[Slice]:
@@ -115,14 +136,17 @@ def _parts(valuation: Valuation, positions: bool) -> Iterator[Slice]:
         yield from wholes(valuation, each="position")
 
 
-def _reasons(part: Slice, window: int) -> list[str | None]:
-    """For each subject why there is no forecast: a book that is missing, or a position without exposure or returns."""
+def _troubles(part: Slice, window: int) -> Mapping[int, str]:
+    return part.window_troubles(window, part.sessions_used(window)) | part.exposure_troubles()
+
+
+def _reasons(part: Slice, troubles: Mapping[int, str]) -> list[str | None]:
+    """For each subject why there is no forecast: a book that is missing, or a position with a trouble."""
     missing = part.world.holdings.missing
     reasons: list[str | None] = [
         next((why for book, why in missing.items() if subject.book in (None, book)), None)
         for subject in part.members.subjects
     ]
-    troubles = part.exposure_troubles() | part.window_troubles(window, part.sessions_used(window))
     for owner, position in zip(part.members.owner.tolist(), part.members.position.tolist(), strict=True):
         reasons[owner] = reasons[owner] or troubles.get(position)
     return reasons

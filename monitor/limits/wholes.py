@@ -31,7 +31,7 @@ def whole_of(part: Slice, book: str | None) -> Slice:
 
 def _slice(valuation: Valuation, book: Book | None, currency: str, calendar: str, each: str | None) -> Slice:
     rule = _unwritten_rule(valuation.world.terms, book, each)
-    return Slice(valuation, rule, members_of(rule, valuation.world), currency, calendar)
+    return Slice(valuation, rule, members_of(rule, valuation.world), currency, calendar, bounded=False)
 
 
 def _unwritten_rule(terms: Terms, book: Book | None, each: str | None) -> Rule:

@@ -64,8 +64,11 @@ def volatility(part: Slice, parameters: Parameters, unit: Unit) -> Measured:
 
     def figures(rows: Floats, subjects: Integers) -> Found:
         if method in RANGE_METHODS:
-            opened, high, low, close = part.ranges(rows.shape[1], subjects)
-            made = parkinson(high, low) if method == "parkinson" else garman_klass(opened, high, low, close)
+            opened, high, low, close, counted = part.ranges(rows.shape[1], subjects)
+            if method == "parkinson":
+                made = parkinson(high, low, counted)
+            else:
+                made = garman_klass(opened, high, low, close, counted)
         elif method == "ewma":
             made = ewma(rows, float(parameters["decay"]))
         else:
@@ -127,10 +130,9 @@ def _of_tail(
     def figures(rows: Floats, subjects: Integers) -> Found:
         names = [(*seed, part.members.subjects[at].key) for at in subjects.tolist()]
         tail = measure_tail(rows, call, names)
-        notes = _fit_notes(tail.note)
-        if inexact and not tail.exact_tail:
-            notes = dict.fromkeys(range(len(rows)), inexact) | notes
-        return Found(chosen(tail), notes, bounds(bound_tail(rows, call, tail, (*seed, "bounds"))))
+        notes = tail_notes(tail, inexact)
+        found = bounds(bound_tail(rows, call, tail, (*seed, "bounds"))) if part.bounded else None
+        return Found(chosen(tail), notes, found)
 
     return _over_window(part, parameters["window"], figures, how_of(parameters), amount=True, days=_overlap(parameters))
 
@@ -199,12 +201,18 @@ def _over_window(
         if n < window:
             for at in subjects.tolist():
                 measured.mark(at, [short_mark(int(n), window)])
-    leave_out_troubled(part, measured, part.exposure_troubles() | part.window_troubles(window, used))
+    leave_out_troubled(part, measured, part.window_troubles(window, used) | part.exposure_troubles())
     return measured
 
 
 def short_mark(n: int, window: int) -> Mark:
     return Mark(MarkKind.SHORT, f"{n} of the {window} sessions of the window")
+
+
+def tail_notes(tail: Tail, inexact: str | None) -> dict[int, str]:
+    """By row, what a reader must know about a tail. inexact: what to say where less than one scenario lies in it."""
+    first = dict.fromkeys(range(len(tail.note)), inexact) if inexact and not tail.exact_tail else {}
+    return first | _fit_notes(tail.note)
 
 
 def _fit_notes(notes: Codes) -> dict[int, str]:

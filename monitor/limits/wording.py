@@ -27,6 +27,7 @@ _METHODS = {
     "parkinson": "Parkinson's estimator from highs and lows",
     "garman_klass": "Garman and Klass's estimator from opens, highs, lows and closes",
 }
+_OVERLAPPING = "overlapping periods"
 _VOLATILITIES = {"ewma": "exponentially weighted volatility", "garch": "GARCH volatility"}
 _DISTRIBUTIONS = {"normal": "the normal distribution", "student_t": "Student's t distribution"}
 
@@ -39,7 +40,7 @@ def sentence(rule: Rule) -> str:
 
 def made_title(rule: Rule) -> str:
     """A title for a rule that has none."""
-    text = f"{MEASURES[rule.measure.name].noun} {_whose(rule).rstrip(',')}: {_limits(rule)}{_unit(rule)}"
+    text = f"{MEASURES[rule.measure.name].noun} {_whose(rule).rstrip(',')}{_to(rule)}: {_limits(rule)}{_unit(rule)}"
     return text[0].upper() + text[1:]
 
 
@@ -69,7 +70,7 @@ def _parts(rule: Rule) -> Mapping[str, str]:
         "title": f"'{rule.title}'",
         "applies to": ", ".join(map(_selector, rule.applies_to)) or "everything",
         "each": rule.each or "one subject",
-        "measure": rule.measure.name + _parameters(rule),
+        "measure": rule.measure.name + _to(rule) + _parameters(rule),
         "unit": rule.unit + (f" in {rule.currency}" if rule.currency else ""),
         **{
             key.replace("_", " "): "none" if level is None else _figure(rule, level) + _unit(rule)
@@ -84,7 +85,18 @@ def _parts(rule: Rule) -> Mapping[str, str]:
 
 
 def _subject(rule: Rule) -> str:
-    return f"the {MEASURES[rule.measure.name].noun}{_parameters(rule)} {_whose(rule)}"
+    noun = MEASURES[rule.measure.name].noun
+    if _to(rule):
+        return f"the {noun} {_whose(rule)}{_to(rule)}{_parameters(rule)}"
+    return f"the {noun}{_parameters(rule)} {_whose(rule)}"
+
+
+def _to(rule: Rule) -> str:
+    """What a contribution is one to: ` to its book's value at risk`; nothing for other measures."""
+    given = rule.measure.parameters
+    if "within" not in given:
+        return ""
+    return f" to {_owner(rule) or _SUBJECTS}{MEASURES[given['of']].noun}"
 
 
 def _demand(rule: Rule) -> str:
@@ -117,11 +129,13 @@ def _unit(rule: Rule, owner: str = "") -> str:
         return f" of {owner}{_SHARES[rule.unit]}"
     if rule.unit is Unit.AMOUNT:
         return f" {rule.currency}" if rule.currency else f" in {owner or _SUBJECTS}currency"
-    return ""
+    return " of each further unit of exposure" if rule.measure.name == "marginal" else ""
 
 
 def _owner(rule: Rule) -> str:
     """Whose NAV, gross exposure or currency; empty where the rule alone does not say how many books are left."""
+    if rule.measure.parameters.get("within") == "firm":
+        return "the firm's "
     if rule.each in ("position", "book"):
         return "its book's "
     books = next((item for item in rule.applies_to if item.tag == "book" and item.values is not None), None)
@@ -165,22 +179,28 @@ def _parameters(rule: Rule) -> str:
             else f"{threshold.normalize():,f} in {_owner(rule) or _SUBJECTS}currency"
         )
         said.append(f"above {size}")
-    elif "of" in given:
-        said.append(f"of {_owner(rule) or _SUBJECTS}{MEASURES[given['of']].noun}")
     if "method" in given:
         said.append(_METHODS[str(given["method"])])
     if "confidence" in given:
         said.append(f"confidence {percent(given['confidence'])}")
     if "horizon_days" in given:
-        said.append("horizon " + _counted(given["horizon_days"], "day"))
+        said.append("horizon " + _counted(given["horizon_days"], "day") + _way(given))
     if "window" in given:
         said.append("window " + _counted(given["window"], "session"))
-    said += details(given)
+    said += [words for words in details(given) if words != _OVERLAPPING]
     if "drift" in given:
         said.append("drift " + ("as in the window" if given["drift"] == "sample" else "zero"))
     if "basis" in given:
         said.append(f"{given['basis']} P&L")
     return f" ({', '.join(said)})" if said else ""
+
+
+def _way(parameters: Mapping[str, Any]) -> str:
+    """How the horizon is reached. A day is there already, and Monte Carlo draws its days."""
+    if parameters.get("horizon") == "overlapping":
+        return f" by {_OVERLAPPING}"
+    drawn = parameters.get("method") == "monte_carlo"
+    return "" if drawn or parameters["horizon_days"] == 1 else " by the root of time"
 
 
 def method_words(parameters: Mapping[str, Any]) -> str:
@@ -199,11 +219,12 @@ def details(parameters: Mapping[str, Any]) -> list[str]:
     if parameters.get("fit") == "kurtosis":
         said.append("fitted to the kurtosis")
     if "tail_share" in parameters:
-        said.append(f"from the worst {percent(parameters['tail_share'])} of the sessions")
+        of = "periods" if parameters.get("horizon") == "overlapping" else "sessions"
+        said.append(f"from the worst {percent(parameters['tail_share'])} of the {of}")
     if "paths" in parameters:
         said.append(f"{parameters['paths']:,} draws of {_DISTRIBUTIONS[parameters['distribution']]}")
     if parameters.get("horizon") == "overlapping":
-        said.append("overlapping periods")
+        said.append(_OVERLAPPING)
     return said
 
 

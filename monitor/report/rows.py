@@ -92,13 +92,23 @@ def _row(answer: Answer, rules: Mapping[str, Rule]) -> Row:
         rule=answer.rule,
         subject=answer.subject.name,
         value=figures.value_of(answer),
-        bounds=figures.bounds_of(answer) or "",
+        bounds=figures.bounds_in_short(answer),
         limit=_limit(answer),
         near=_near(answer),
         utilisation=figures.utilisation(answer.utilisation),
         bar=_bar(answer),
         how=measured_by(answer),
-        notes=(*([answer.reason] if answer.reason else []), *(f"{mark.kind}: {mark.note}" for mark in answer.marks)),
+        notes=_notes(answer),
+    )
+
+
+def _notes(answer: Answer) -> tuple[str, ...]:
+    """What a reader must know of the figure: why there is none, why a bound is missing, what is doubtful."""
+    bound = [f"bounds: {answer.unbounded}"] if answer.unbounded else []
+    return (
+        *([answer.reason] if answer.reason else []),
+        *bound,
+        *(f"{mark.kind}: {mark.note}" for mark in answer.marks),
     )
 
 

@@ -25,6 +25,7 @@ class BoundLack(IntEnum):
     IRREGULAR = 3
     OUT_OF_RANGE = 4
     OVERLAPPING = 5
+    SEVERAL_DAYS = 6
 
 
 BOUND_LACK_TEXT: dict[BoundLack, str] = {
@@ -34,6 +35,7 @@ BOUND_LACK_TEXT: dict[BoundLack, str] = {
     BoundLack.IRREGULAR: "the fitted tail ends so abruptly that the errors of its fit are not known",
     BoundLack.OUT_OF_RANGE: "a bound is too large to calculate with",
     BoundLack.OVERLAPPING: "the bounds of this method need scenarios that do not overlap",
+    BoundLack.SEVERAL_DAYS: "no bounds are known of several simulated days of Student's t",
 }
 
 

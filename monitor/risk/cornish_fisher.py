@@ -9,8 +9,8 @@ from decimal import Decimal
 import numpy as np
 
 from monitor.risk.figures import Booleans, Codes, Figures, Floats, Lack, screen
-from monitor.risk.moments import skewness_and_kurtosis
-from monitor.risk.normal import fit_normal, standard_normal_tail
+from monitor.risk.moments import four_moments
+from monitor.risk.normal import fit_normal, normal_of, standard_normal_tail
 from monitor.risk.tail import Drift, Tail, root_of_time, tail_share
 
 
@@ -31,16 +31,17 @@ class CornishFisherFit:
 
 def fit_cornish_fisher(pnl: Floats, drift: Drift) -> CornishFisherFit:
     """Location and sigma of `fit_normal`, skewness and excess kurtosis of the scenarios. pnl: (subjects, n), n >= 2."""
-    fit = fit_normal(pnl, drift)
-    scenarios, _ = screen(pnl, least=2)
-    lack = fit.lack.copy()
-    skewness, kurtosis = np.zeros(len(lack)), np.zeros(len(lack))
-    moving = (lack == Lack.NONE) & (fit.sigma > 0)
-    if moving.any():
-        with np.errstate(all="ignore"):
-            found = skewness_and_kurtosis(scenarios)
-        skewness[moving], kurtosis[moving] = found[0][moving], found[1][moving]
-        lack[moving & ~in_domain(skewness, kurtosis)] = Lack.OUTSIDE_DOMAIN
+    scenarios, lack = screen(pnl, least=2)
+    subjects, n = scenarios.shape
+    if n < 2:
+        fit = fit_normal(pnl, drift)
+        return CornishFisherFit(fit.location, fit.sigma, np.zeros(subjects), np.zeros(subjects), fit.lack)
+    with np.errstate(all="ignore"):
+        mean, sigma, skewness, kurtosis = four_moments(scenarios)
+    fit = normal_of(scenarios, lack, mean, sigma, drift)
+    moving = (fit.lack == Lack.NONE) & (fit.sigma > 0)
+    skewness[~moving], kurtosis[~moving] = 0.0, 0.0
+    lack = np.where(moving & ~in_domain(skewness, kurtosis), Lack.OUTSIDE_DOMAIN, fit.lack).astype(np.int8)
     return CornishFisherFit(fit.location, fit.sigma, skewness, kurtosis, lack)
 
 

@@ -73,8 +73,11 @@ def screen(matrix: Floats, least: int) -> tuple[Floats, Codes]:
     matrix = np.ascontiguousarray(matrix, dtype=np.float64)
     if matrix.ndim != 2:
         raise ValueError(f"the matrix must be (subjects, scenarios) (got {matrix.ndim} axes)")
-    finite = np.asarray(np.isfinite(matrix).all(axis=1))
-    lack = np.where(finite, Lack.NONE, Lack.NOT_FINITE).astype(np.int8)
+    lack = np.full(len(matrix), Lack.NONE, dtype=np.int8)
+    # A finite sum has finite terms only: few rows are left to look at closely.
+    with np.errstate(all="ignore"):
+        doubtful = np.flatnonzero(~np.isfinite(matrix.sum(axis=1)))
+    lack[doubtful[~np.isfinite(matrix[doubtful]).all(axis=1)]] = Lack.NOT_FINITE
     if matrix.shape[1] < least:
         lack[:] = Lack.TOO_SHORT
     return matrix, lack

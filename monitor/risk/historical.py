@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from decimal import Decimal
 from fractions import Fraction
 
@@ -41,42 +41,45 @@ def historical_at(pnl: Floats, confidences: Sequence[Decimal], horizon_days: int
     if n < 1 or not shares:
         nothing = Figures.of(np.zeros(subjects), lack)
         return tuple(Tail(nothing, nothing, exact_tail=False, note=np.zeros_like(lack)) for _ in shares)
-    worst = _worst(scenarios, math.ceil(max(shares) * n))
-    tails = []
-    for share in shares:
-        within = share * n
-        rank, counted = math.ceil(within), max(within, Fraction(1))
-        weights = np.array([float(min(counted - place, 1)) for place in range(rank)])
-        with np.errstate(all="ignore"):
-            value_at_risk = -worst[:, rank - 1]
-            shortfall = -(worst[:, :rank] * weights).sum(axis=1) / float(counted)
-            # The mean of equal losses can round to just below them; the shortfall is never below the value at risk.
-            shortfall = np.maximum(shortfall, value_at_risk)
-            tails.append(
-                Tail(
-                    Figures.of(value_at_risk * root, lack),
-                    Figures.of(shortfall * root, lack),
-                    exact_tail=within >= 1,
-                    note=np.zeros_like(lack),
-                )
+    counted = [max(share * n, Fraction(1)) for share in shares]
+    ranks = [math.ceil(many) for many in counted]
+    weights = [
+        np.array([float(min(many - place, 1)) for place in range(rank)])
+        for many, rank in zip(counted, ranks, strict=True)
+    ]
+    value_at_risk, shortfall = np.empty((2, len(shares), subjects))
+    with np.errstate(all="ignore"):
+        for rows, worst in _worst(scenarios, max(ranks)):
+            for level, rank in enumerate(ranks):
+                value_at_risk[level, rows] = -worst[:, rank - 1]
+                shortfall[level, rows] = -(worst[:, :rank] * weights[level]).sum(axis=1) / float(counted[level])
+        # The mean of equal losses can round to just below them; the shortfall is never below the value at risk.
+        np.maximum(shortfall, value_at_risk, out=shortfall)
+        return tuple(
+            Tail(
+                Figures.of(value_at_risk[level] * root, lack),
+                Figures.of(shortfall[level] * root, lack),
+                exact_tail=share * n >= 1,
+                note=np.zeros_like(lack),
             )
-    return tuple(tails)
+            for level, share in enumerate(shares)
+        )
 
 
-def _worst(scenarios: Floats, rank: int) -> Floats:
-    """The `rank` smallest of each row, ascending: (subjects, rank)."""
+def _worst(scenarios: Floats, rank: int) -> Iterator[tuple[slice, Floats]]:
+    """Some rows at a time, the `rank` smallest of each, ascending: (rows, rank), until the next are asked for."""
     subjects, n = scenarios.shape
-    worst = np.empty((subjects, rank))
     pieces = math.ceil(n / _PIECE) if 4 * rank <= _PIECE else 1
-    buffer = np.empty((min(_BLOCK, subjects), n))  # one for all blocks: fresh memory costs more than the arithmetic
+    # One memory for all blocks: fresh memory costs more than the arithmetic.
+    room, room_for_found = np.empty((min(_BLOCK, subjects), n)), np.empty((min(_BLOCK, subjects), pieces * rank))
     for start in range(0, subjects, _BLOCK):
         rows = slice(start, start + _BLOCK)
-        block = buffer[: len(scenarios[rows])]
+        block = room[: len(scenarios[rows])]
         block[:] = scenarios[rows]
-        for piece in np.array_split(block, pieces, axis=1):
-            piece.partition(rank - 1, axis=1)
         # Whatever is among the smallest of the row is among the smallest of its piece.
-        found = np.concatenate([piece[:, :rank] for piece in np.array_split(block, pieces, axis=1)], axis=1)
+        found = room_for_found[: len(block)]
+        for at, piece in enumerate(np.array_split(block, pieces, axis=1)):
+            piece.partition(rank - 1, axis=1)
+            found[:, at * rank : (at + 1) * rank] = piece[:, :rank]
         found.sort(axis=1)
-        worst[rows] = found[:, :rank]
-    return worst
+        yield rows, found[:, :rank]

@@ -68,15 +68,15 @@ def leave_one_out(
     numbers round, on a day left out the rounded P_d - x_d is still no less than those on the k worst days of P. The
     days kept are a prefix of P's order, and the k worst days are always among them.
 
-    Pairs are taken by the number of their days, those with few together. Figures (pairs,); the position's rows must be
-    finite, else its subjects have NOT_FINITE on every pair.
+    whole: (subjects, n), P. pnl: (positions, n), x. Pairs are taken by the number of their days, those with few
+    together. Figures (pairs,), NOT_FINITE where the row of the subject or of the position is not finite.
     """
     root = root_of_time(horizon_days)
     share = tail_share(confidence)
-    pnl = np.ascontiguousarray(pnl, dtype=np.float64)
     together, lack_of_whole = screen(whole, least=1)
     n = together.shape[1]
-    lack = lack_of_whole[owner]
+    own, lack_of_own = screen(pnl, least=1)
+    lack = np.where(lack_of_whole[owner] == Lack.NONE, lack_of_own[position], lack_of_whole[owner]).astype(np.int8)
     at_risk, shortfall = np.full(len(owner), np.nan), np.full(len(owner), np.nan)
     if n >= 1:
         weights, counted = tail_weights(share, n)
@@ -84,7 +84,7 @@ def leave_one_out(
         with np.errstate(all="ignore"):
             order = np.argsort(together, axis=1, kind="stable")
             ascending = np.take_along_axis(together, order, axis=1)
-            largest = np.maximum(pnl.max(axis=1), -pnl.min(axis=1))[position]
+            largest = np.maximum(own.max(axis=1), -own.min(axis=1))[position]
             bound = ascending[owner, rank - 1] + 2 * largest
             measured = np.flatnonzero(lack == Lack.NONE)
             days = _days_up_to(bound[measured], ascending, owner[measured])
@@ -94,7 +94,7 @@ def leave_one_out(
                 pairs = measured[block]
                 count = int(days[block[-1]])
                 whose, which = owner[pairs], position[pairs, np.newaxis]
-                left = ascending[whose, :count] - pnl.take(which * n + order[whose, :count])
+                left = ascending[whose, :count] - own.take(which * n + order[whose, :count])
                 worst = np.partition(left, rank - 1, axis=1)[:, :rank]
                 worst.sort(axis=1)
                 at_risk[pairs] = -worst[:, -1]

@@ -21,10 +21,13 @@ def mean_and_deviation(scenarios: Floats) -> tuple[Floats, Floats]:
     and LeVeque 1983, "Algorithms for computing the sample variance"). A constant row gives exactly 0: its deviations
     are then all the same few units in the last place, whose sums and squares are exact.
     """
-    n = scenarios.shape[1]
-    mean = scenarios.mean(axis=1)
-    deviations = scenarios - mean[:, np.newaxis]
-    squares = np.square(deviations).sum(axis=1) - np.square(deviations.sum(axis=1)) / n
+    subjects, n = scenarios.shape
+    mean, squares = np.empty(subjects), np.empty(subjects)
+    room = np.empty((min(_BLOCK, subjects), n))
+    for start in range(0, subjects, _BLOCK):
+        rows = slice(start, start + _BLOCK)
+        mean[rows], left, deviations = _deviations(scenarios[rows], room)
+        squares[rows] = np.vecdot(deviations, deviations) - n * np.square(left)
     return mean, np.sqrt(np.maximum(squares, 0.0) / (n - 1))
 
 
@@ -41,18 +44,36 @@ def skewness_and_kurtosis(scenarios: Floats) -> tuple[Floats, Floats]:
     sampling error sqrt(24 / n) and right for the normal only. It is also the pair of Jarque and Bera (1980). With
     fat tails both are too small in the mean: g2 never exceeds n - 5 + 1 / (n - 1), whatever the distribution.
     """
-    skewness, kurtosis = np.empty(len(scenarios)), np.empty(len(scenarios))
-    for start in range(0, len(scenarios), _BLOCK):
+    return four_moments(scenarios)[2:]
+
+
+def four_moments(scenarios: Floats) -> tuple[Floats, Floats, Floats, Floats]:
+    """`mean_and_deviation` and `skewness_and_kurtosis` together, to the same bits. scenarios: (subjects, n), n >= 2."""
+    subjects, n = scenarios.shape
+    mean, squares, skewness, kurtosis = np.empty((4, subjects))
+    room, room_for_squares = np.empty((2, min(_BLOCK, subjects), n))
+    for start in range(0, subjects, _BLOCK):
         rows = slice(start, start + _BLOCK)
-        deviations = scenarios[rows] - scenarios[rows].mean(axis=1)[:, np.newaxis]
-        deviations -= deviations.mean(axis=1)[:, np.newaxis]  # what rounding left of the mean would skew the cubes
-        squares = np.square(deviations)
-        deviation = np.sqrt(squares.mean(axis=1))
-        measurable = ~constant(scenarios[rows]) & (deviation > 0) & np.isfinite(deviation)
-        # Divided before they are raised: the fourth power of an amount overflows long before its square does.
-        deviations /= np.where(measurable, deviation, np.nan)[:, np.newaxis]
-        np.square(deviations, out=squares)
-        deviations *= squares
-        np.square(squares, out=squares)
-        skewness[rows], kurtosis[rows] = deviations.mean(axis=1), squares.mean(axis=1) - 3.0
-    return skewness, kurtosis
+        mean[rows], left, deviations = _deviations(scenarios[rows], room)
+        squares[rows] = np.vecdot(deviations, deviations) - n * np.square(left)
+        deviation = np.sqrt(squares[rows] / n)
+        usable = (deviation > 0) & np.isfinite(deviation)
+        deviations -= left[:, np.newaxis]  # what rounding left of the mean would skew the cubes
+        # Scaled before they are raised: the fourth power of an amount overflows long before its square does.
+        deviations *= np.divide(1.0, deviation, where=usable, out=np.full(len(usable), np.nan))[:, np.newaxis]
+        squared = np.square(deviations, out=room_for_squares[: len(deviations)])
+        skewness[rows] = np.vecdot(squared, deviations) / n
+        kurtosis[rows] = np.vecdot(squared, squared) / n - 3.0
+    return mean, np.sqrt(np.maximum(squares, 0.0) / (n - 1)), skewness, kurtosis
+
+
+def _deviations(scenarios: Floats, room: Floats) -> tuple[Floats, Floats, Floats]:
+    """The mean as rounded and the mean of the deviations from it, both (rows,), and these deviations, kept in room.
+
+    room: (rows or more, n), one for all blocks: fresh memory costs more than the arithmetic.
+    """
+    n = scenarios.shape[1]
+    ones = np.ones(n)  # the product with them is the sum, faster than by sum
+    mean = np.vecdot(scenarios, ones) / n
+    deviations = np.subtract(scenarios, mean[:, np.newaxis], out=room[: len(scenarios)])
+    return mean, np.vecdot(deviations, ones) / n, deviations

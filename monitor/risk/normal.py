@@ -14,8 +14,6 @@ from monitor.risk.figures import Codes, Figures, Floats, Lack, screen
 from monitor.risk.moments import constant, mean_and_deviation
 from monitor.risk.tail import Drift, Tail, check_drift, root_of_time, tail_share
 
-_BLOCK = 256
-
 
 @dataclass(frozen=True)
 class NormalFit:
@@ -36,16 +34,22 @@ def fit_normal(pnl: Floats, drift: Drift) -> NormalFit:
     subjects, n = scenarios.shape
     if n < 2:
         return NormalFit(np.zeros(subjects), np.zeros(subjects), lack)
-    mean, sigma, same = np.empty(subjects), np.empty(subjects), np.empty(subjects, dtype=np.bool_)
-    for start in range(0, subjects, _BLOCK):
-        rows = slice(start, start + _BLOCK)
-        with np.errstate(all="ignore"):
-            mean[rows], sigma[rows] = mean_and_deviation(scenarios[rows])
-        same[rows] = constant(scenarios[rows])
+    with np.errstate(all="ignore"):
+        mean, sigma = mean_and_deviation(scenarios)
+    return normal_of(scenarios, lack, mean, sigma, drift)
+
+
+def normal_of(scenarios: Floats, lack: Codes, mean: Floats, sigma: Floats, drift: Drift) -> NormalFit:
+    """`fit_normal` of scenarios that are screened, n >= 2, and whose mean and standard deviation are known."""
+    check_drift(drift)
+    lack = lack.copy()
+    same = np.zeros(len(lack), dtype=np.bool_)
+    spreadless = np.flatnonzero(~(sigma > 0))  # among them every row of one value
+    same[spreadless] = constant(scenarios[spreadless])
     lack[(lack == Lack.NONE) & same & (scenarios[:, 0] != 0)] = Lack.CONSTANT
     # Squares that vanish would tell a book that moves that it cannot lose; squares that overflow say nothing either.
     lack[(lack == Lack.NONE) & ((~same & (sigma == 0)) | ~np.isfinite(sigma))] = Lack.OUT_OF_RANGE
-    return NormalFit(mean if drift == "sample" else np.zeros(subjects), sigma, lack)
+    return NormalFit(mean if drift == "sample" else np.zeros(len(lack)), sigma, lack)
 
 
 def standard_normal_tail(share: float) -> tuple[float, float]:

@@ -9,8 +9,8 @@ import numpy as np
 from scipy.special import gammaln, stdtrit
 
 from monitor.risk.figures import Figures, Floats, Lack, screen
-from monitor.risk.moments import skewness_and_kurtosis
-from monitor.risk.normal import fit_normal, standard_normal_tail
+from monitor.risk.moments import four_moments
+from monitor.risk.normal import fit_normal, normal_of, standard_normal_tail
 from monitor.risk.student_fit import LEAST_SCENARIOS, NU_CEILING, StudentFit, fit_student
 from monitor.risk.tail import Drift, FitNote, Tail, root_of_time, tail_share
 
@@ -49,21 +49,21 @@ def match_kurtosis(pnl: Floats, drift: Drift) -> StudentFit:
     nu is above 4 whatever the scenarios, and they can only show K up to about n - 5: tails as fat as those of t(4)
     and beyond, for which K does not exist, are measured too thin, and one outlier sways K as no other figure.
     """
-    fit = fit_normal(pnl, drift)
-    scenarios, _ = screen(pnl, least=2)
-    scale, nu = fit.sigma.copy(), np.full(len(scenarios), np.inf)
-    note = np.full(len(scenarios), FitNote.AS_ASKED, dtype=np.int8)
-    moving = (fit.lack == Lack.NONE) & (fit.sigma > 0)
+    scenarios, lack = screen(pnl, least=2)
     if scenarios.shape[1] < LEAST_SCENARIOS:
-        note[moving] = FitNote.NORMAL_FOR_TOO_FEW
-    elif moving.any():
-        with np.errstate(all="ignore"):
-            _, kurtosis = skewness_and_kurtosis(scenarios)
-            matched = np.where(kurtosis > 0, 4 + 6 / kurtosis, np.inf)
-        nu[moving & (matched < NU_CEILING)] = matched[moving & (matched < NU_CEILING)]
-        found = np.isfinite(nu)
-        scale[found] *= np.sqrt((nu[found] - 2) / nu[found])
-        note[moving & ~found] = FitNote.NORMAL_AS_LIMIT
+        fit = fit_normal(pnl, drift)
+        moving = (fit.lack == Lack.NONE) & (fit.sigma > 0)
+        note = np.where(moving, FitNote.NORMAL_FOR_TOO_FEW, FitNote.AS_ASKED).astype(np.int8)
+        return StudentFit(fit.location, fit.sigma, np.full(len(lack), np.inf), note, fit.lack)
+    with np.errstate(all="ignore"):
+        mean, sigma, _, kurtosis = four_moments(scenarios)
+        matched = np.where(kurtosis > 0, 4 + 6 / kurtosis, np.inf)
+    fit = normal_of(scenarios, lack, mean, sigma, drift)
+    moving = (fit.lack == Lack.NONE) & (fit.sigma > 0)
+    found = moving & (matched < NU_CEILING)
+    nu, scale = np.where(found, matched, np.inf), sigma.copy()
+    scale[found] *= np.sqrt((nu[found] - 2) / nu[found])
+    note = np.where(moving & ~found, FitNote.NORMAL_AS_LIMIT, FitNote.AS_ASKED).astype(np.int8)
     return StudentFit(fit.location, scale, nu, note, fit.lack)
 
 

@@ -9,6 +9,8 @@ import numpy as np
 from monitor.risk.figures import Figures, Floats, screen
 from monitor.risk.moments import mean_and_deviation
 
+_BLOCK = 256
+
 
 def sample(returns: Floats) -> Figures:
     """Standard deviation per session with denominator n - 1, in the unit of the returns.
@@ -33,7 +35,8 @@ def ewma(returns: Floats, decay: float) -> Figures:
     if scenarios.shape[1] < 1:
         return Figures.of(np.zeros(len(scenarios)), lack)
     with np.errstate(all="ignore"):
-        return Figures.of(np.sqrt(ewma_variance(np.square(scenarios).mean(axis=1), scenarios, decay)), lack)
+        mean_square = np.vecdot(scenarios, scenarios) / scenarios.shape[1]
+        return Figures.of(np.sqrt(ewma_variance(mean_square, scenarios, decay)), lack)
 
 
 def ewma_variance(start: Floats, returns: Floats, decay: float) -> Floats:
@@ -42,9 +45,15 @@ def ewma_variance(start: Floats, returns: Floats, decay: float) -> Floats:
     start: (subjects,). returns: (subjects, sessions), finite. Returns (subjects,). See `ewma` for the formula.
     """
     check_decay(decay)
-    n = returns.shape[1]
+    subjects, n = returns.shape
     weights = (1 - decay) * decay ** np.arange(n - 1, -1, -1)
-    return np.asarray(decay**n * start + (np.square(returns) * weights).sum(axis=1))
+    variance = decay**n * start
+    room = np.empty((min(_BLOCK, subjects), n))
+    for first in range(0, subjects, _BLOCK):
+        rows = slice(first, first + _BLOCK)
+        squares = np.square(returns[rows], out=room[: len(returns[rows])])
+        variance[rows] += np.vecdot(squares, weights)
+    return np.asarray(variance)
 
 
 def ewma_variances(returns: Floats, decay: float) -> Floats:

@@ -21,6 +21,7 @@ import warnings
 import numpy as np
 import pandas as pd
 from arch import arch_model
+from bench_common import tell
 
 from monitor.risk.garch import conditional_variances, fit_garch
 
@@ -77,7 +78,8 @@ def measure(count: int) -> None:
         f"{count} series of {SESSIONS} sessions: ours {one * 1000:.2f} ms a series, arch {other * 1000:.1f} ms a series"
     )
     turns = ", ".join(f"{script / batch:.1f}" for batch, script in zip(ours, theirs, strict=True))
-    print(f"ratio {other / one:.1f} (goal 15); by turn {turns}")
+    print(f"by turn {turns}")
+    tell(f"GARCH(1,1), {count} series", "a loop of arch", other / one, 15)
     print(
         f"more than 0.1 below the better likelihood: ours {(ahead < -0.1).mean():.1%} (goal 1 %), "
         f"arch {(ahead > 0.1).mean():.1%}; not settled {(~fit.converged).sum()}"

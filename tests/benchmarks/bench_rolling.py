@@ -22,19 +22,13 @@ from decimal import Decimal
 
 import numpy as np
 import pandas as pd
+from bench_common import simulated, tell
 
 from monitor.risk.rolling import rolling_historical
 
 POSITIONS, DAYS = 2_000, 2_500
 SCRIPTED, LOOPED, ROLLED = 2, 10, 100  # positions in the samples
 CONFIDENCE = Decimal("0.99")
-
-
-def simulated(random: np.random.Generator) -> np.ndarray:
-    log_volatility = np.zeros(DAYS)
-    for day in range(1, DAYS):
-        log_volatility[day] = 0.97 * log_volatility[day - 1] + 0.1 * random.normal()
-    return 0.01 * np.exp(log_volatility) * random.standard_t(4, size=(POSITIONS, DAYS))
 
 
 def at_risk(window: pd.Series) -> float:
@@ -82,7 +76,7 @@ def seconds(work: Callable[[], object]) -> float:
 if __name__ == "__main__":
     repeats = int(sys.argv[1]) if len(sys.argv) > 1 else 3
     window = int(sys.argv[2]) if len(sys.argv) > 2 else 500
-    rows = simulated(np.random.default_rng(22))
+    rows = simulated(np.random.default_rng(22), POSITIONS, DAYS)
     tail = rolling_historical(rows, window, CONFIDENCE)
     for slow, size in ((script, SCRIPTED), (loop, LOOPED)):
         wanted_at_risk, wanted_shortfall = slow(rows[:size], window)
@@ -100,7 +94,8 @@ if __name__ == "__main__":
         for name, (size, work) in contestants.items():
             taken[name].append(seconds(work) * POSITIONS / size)
     ours = statistics.median(taken["rolling_historical"])
-    print(f"window {window}")
-    for name, times in taken.items():
-        median, size = statistics.median(times), contestants[name][0]
-        print(f"{name:40s} {median:8.2f} s from {size} positions, ratio {median / ours:.1f}x")
+    print(f"rolling_historical: {ours:.2f} s")
+    for name, goal in zip(list(taken)[1:], (500, None, 2.5), strict=True):
+        median, size = statistics.median(taken[name]), contestants[name][0]
+        print(f"{name}: {median:.2f} s, scaled up from {size} positions")
+        tell(f"rolling value at risk and shortfall, {window} days", name, median / ours, goal)

@@ -508,12 +508,14 @@ def test_the_site_has_three_books_in_three_currencies_and_one_round() -> None:
 
 
 def test_the_rules_use_every_kind_of_limit() -> None:
-    assert len(rules()) == 16
+    assert len(rules()) == 19
     assert {rule.measure.parameters.get("method") for rule in rules().values()} == {
         None,
         "historical",
         "normal",
         "student_t",
+        "peaks_over_threshold",
+        "monte_carlo",
         "sample",
         "ewma",
     }

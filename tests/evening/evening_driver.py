@@ -51,7 +51,7 @@ def load() -> None:
     with tempfile.TemporaryDirectory() as folder, redirect_stdout(io.StringIO()):
         site = write_site(Path(folder) / "site")
         leave_files(site, FIRST, big=True)
-        for command in (["check"], ["report"], ["excess", "list"], ["ledger", "verify"]):
+        for command in (["check"], ["report"], ["excess", "list"], ["ledger", "verify"], ["backtest"]):
             with suppress(SystemExit):
                 main(evening_of(FIRST), [*command, "--site", str(site)])
 

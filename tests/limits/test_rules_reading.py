@@ -163,6 +163,7 @@ def test_what_a_rule_leaves_out_comes_from_the_site() -> None:
             "{name: component, of: expected_shortfall}",
             {
                 "of": "expected_shortfall",
+                "within": "book",
                 "method": "historical",
                 "confidence": Decimal("0.975"),
                 "horizon_days": 1,

@@ -103,7 +103,7 @@ def test_it_says_what_happened_and_what_it_rests_on(reading: Reading) -> None:
         "Lacking tonight nav of cove-lane: nothing came by 19:00",
         "Excess opened 1 One-day 99 % VaR of the whole firm (the firm): EUR 2,004,120, allowed at most EUR 2,000,000",
         "Excess cured 1 Gross exposure at most twice the net assets (far-east), opened on 2026-03-09: its figure came",
-        "EUR 1,301,000 to EUR 1,878,000 (95 % sampling bounds)",
+        "1,301,000 to 1,878,000",
         "value at risk (VaR), historical, 99 %, 1 day, 500 sessions, n = 487 short: 487 of 500 sessions",
         "212 of 500 sessions have a return; at least 95 % are needed",
         "carried: close of 2026-03-10, two sessions old",

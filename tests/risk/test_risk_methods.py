@@ -2,6 +2,7 @@
 
 from dataclasses import replace
 from decimal import Decimal
+from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -35,9 +36,9 @@ CALLS = {
     "cornish_fisher, drift": TailCall("cornish_fisher", NINETY_NINE, drift="sample"),
     "peaks_over_threshold": TailCall("peaks_over_threshold", NINETY_NINE),
     "peaks_over_threshold, inside": TailCall("peaks_over_threshold", Decimal("0.8")),
-    "monte_carlo": TailCall("monte_carlo", NINETY_NINE, paths=10_000),
+    "monte_carlo": TailCall("monte_carlo", NINETY_NINE, paths=2_000),
     "monte_carlo, t, drift, two days": TailCall(
-        "monte_carlo", NINETY_NINE, horizon_days=2, drift="sample", distribution="student_t", paths=10_000
+        "monte_carlo", NINETY_NINE, horizon_days=2, drift="sample", distribution="student_t", paths=2_000
     ),
 }
 every_call = pytest.mark.parametrize("call", CALLS.values(), ids=CALLS.keys())
@@ -45,6 +46,9 @@ often = settings(max_examples=15, deadline=None)
 FIGURES = ("value_at_risk", "expected_shortfall")
 CONFIDENCES = st.sampled_from([Decimal(text) for text in ("0.9", "0.975", "0.99")])
 SEED = ("Small Trust", "2026-03-06", "bounds")
+
+
+METHODS_OF_CALLS = sorted({call.method for call in CALLS.values()})
 
 
 def those(*methods):
@@ -116,8 +120,9 @@ def test_twice_the_position_is_twice_the_risk_and_the_shortfall_is_not_below_val
 
     at_risk, shortfall = values(tail)
     both = np.isfinite(at_risk) & np.isfinite(shortfall)
-    # Of a fit without a spread to speak of rounding may leave the two apart by their last digit.
-    assert (shortfall >= at_risk - 1e-12 * np.abs(at_risk))[both].all()
+    # Two multiples of one fitted scale may differ by rounding where they are equal; scenarios are read as they are.
+    slack = 0 if call.method in ("historical", "age_weighted", "volatility_scaled") else 1e-12
+    assert (shortfall >= at_risk - slack * np.abs(at_risk))[both].all()
     for one, other in zip(values(tail), values(scaled_tail), strict=True):
         np.testing.assert_allclose(other, one * 2.0**power, rtol=TOLERANCE[call.method])
 
@@ -143,7 +148,7 @@ def test_a_subject_alone_is_the_same_to_the_last_digit_as_in_a_block_of_a_thousa
 
 @pytest.mark.parametrize("name", CALLS)
 def test_the_order_of_subjects_does_not_matter(name, thousand, of_thousand):
-    order = np.random.default_rng(3).permutation(len(thousand))[:300]
+    order = np.random.default_rng(3).permutation(len(thousand))[:150]
     names = names_of(len(thousand))
     before = thousand.copy()
 
@@ -153,13 +158,16 @@ def test_the_order_of_subjects_does_not_matter(name, thousand, of_thousand):
     np.testing.assert_array_equal(thousand, before)  # what was given is left alone
 
 
-@every_call
+@those(*(method for method in METHODS_OF_CALLS if method != "monte_carlo"))
 def test_more_confidence_is_never_less_risk(call):
-    """Beyond the threshold: peaks over threshold goes over from scenarios to a fitted tail there, with a step."""
+    """Beyond the threshold: peaks over threshold goes over from scenarios to a fitted tail there, with a step.
+
+    Not of Monte Carlo, whose draws depend on the confidence.
+    """
     pnl = walks(6)
     levels = ("0.95", "0.99", "0.995") if call.method == "peaks_over_threshold" else ("0.9", "0.95", "0.99", "0.995")
     rising = [values(measured(pnl, replace(call, confidence=Decimal(level)))) for level in levels]
-    for less, more in zip(rising, rising[1:], strict=False):
+    for less, more in pairwise(rising):
         for low, high in zip(less, more, strict=True):
             assert (high[np.isfinite(low)] >= low[np.isfinite(low)]).all()
 
@@ -235,7 +243,9 @@ def test_bounds_lie_around_the_figure_and_are_those_of_the_subject_alone(call, f
         assert np.isnan(own.low[told.lack != Lack.NONE]).all()
     rtol = BOUNDS_ALONE.get(call.method, 0)
     for at in range(9):
-        alone = bound_tail(fifty[at : at + 1], call, measured(fifty[at : at + 1], call, names_of(50)[at : at + 1]), SEED)
+        alone = bound_tail(
+            fifty[at : at + 1], call, measured(fifty[at : at + 1], call, names_of(50)[at : at + 1]), SEED
+        )
         for figure in FIGURES:
             one, other = getattr(alone, figure), getattr(bounds, figure)
             assert one.reason[0] == other.reason[at]
@@ -254,20 +264,44 @@ def test_bounds_of_twice_the_position_are_twice_as_far(call, fifty):
             np.testing.assert_allclose(other, one * 8, rtol=max(TOLERANCE[call.method], 1e-9))
 
 
-@every_call
-def test_nearly_every_ordinary_subject_has_the_bounds_that_its_method_can_have(call):
-    """Lest the tests above pass because there are none: at 99 % of 500 sessions all methods have both bounds."""
+OPEN_ABOVE = {  # at 99 % of 500: 100 spans end to end, and weights that leave too few scenarios to a shortfall
+    "historical, overlapping": FIGURES,
+    "age_weighted": ("expected_shortfall",),
+    "age_weighted, quick": ("expected_shortfall",),
+}
+
+
+@pytest.mark.parametrize("name", CALLS)
+def test_ordinary_subjects_have_the_bounds_that_their_method_can_have(name):
+    """Lest the tests above pass because there are none."""
     pnl = walks(4, n=500)
-    bounds = bound_tail(pnl, call, measured(pnl, call), SEED)
-    both = [np.isfinite(own.low) & np.isfinite(own.high) for own in (bounds.value_at_risk, bounds.expected_shortfall)]
-    if CALLS["historical, overlapping"] == call or CALLS["age_weighted, quick"] == call:
-        # 100 spans end to end, and a decay that weighs some 30 sessions, are too few for an upper bound at 99 %.
-        assert (bounds.value_at_risk.reason == BoundLack.TOO_FEW).all()
-        assert np.isfinite(bounds.value_at_risk.low).all()
-    else:
-        figure = measured(pnl, call).value_at_risk.lack == Lack.NONE
-        assert figure.sum() >= 2
-        assert all(own[figure].all() for own in both)
+    bounds = bound_tail(pnl, CALLS[name], measured(pnl, CALLS[name]), SEED)
+    for figure in FIGURES:
+        own, is_open = getattr(bounds, figure), figure in OPEN_ABOVE.get(name, ())
+        assert np.isfinite(own.low).all()
+        assert (np.isnan(own.high) == is_open).all()
+        assert (own.reason == (BoundLack.TOO_FEW if is_open else BoundLack.NONE)).all()
+
+
+T_DRAWS = TailCall("monte_carlo", NINETY_NINE, distribution="student_t", paths=2_000)
+STAND_INS = {
+    "monte_carlo": (CALLS["monte_carlo"], CALLS["normal"]),
+    "monte_carlo, t": (T_DRAWS, CALLS["student_t"]),
+    "student_t by kurtosis": (CALLS["student_t by kurtosis"], CALLS["student_t"]),
+}
+
+
+@pytest.mark.parametrize(("call", "closed"), STAND_INS.values(), ids=STAND_INS.keys())
+def test_bounds_of_a_like_method_are_as_far_from_the_figure_as_they_were_from_its_own(call, closed):
+    pnl = walks(6, n=500)
+    told, like = measured(pnl, call), measured(pnl, closed)
+    bounds, of_like = bound_tail(pnl, call, told, SEED), bound_tail(pnl, closed, like, SEED)
+    for figure in FIGURES:
+        here, there = getattr(told, figure).value, getattr(like, figure).value
+        assert (here != there).all()
+        for side in ("low", "high"):
+            by, as_far = getattr(getattr(bounds, figure), side) - here, getattr(getattr(of_like, figure), side) - there
+            np.testing.assert_allclose(by, as_far, rtol=1e-9)
 
 
 def test_over_overlapping_periods_others_than_historical_have_a_figure_and_no_bounds():
@@ -311,6 +345,19 @@ def test_components_add_up_to_the_figure_of_the_whole(call, of):
     assert told >= 2
 
 
+@pytest.mark.parametrize("of", FIGURES)
+def test_with_a_drift_each_position_brings_its_own_mean(of):
+    """By hand: -h m + beta (V + h M), m and M the means of the position and of the whole, beta = cov(x, P) / var(P)."""
+    call, pnl = CALLS["normal, drift, ten days"], walks(4)
+    whole = pnl.sum(axis=0)
+    told = getattr(measured(whole[np.newaxis], call), of).value[0]
+    beta = np.array([np.cov(own, whole)[0, 1] for own in pnl]) / whole.var(ddof=1)
+
+    made = tail_components(pnl, call, of).component
+
+    np.testing.assert_allclose(made, beta * (told + 10 * whole.mean()) - 10 * pnl.mean(axis=1), rtol=1e-9)
+
+
 @every_call
 @pytest.mark.parametrize("of", FIGURES)
 def test_incremental_is_the_difference_of_two_figures(call, of):
@@ -323,11 +370,12 @@ def test_incremental_is_the_difference_of_two_figures(call, of):
 
     found = incremental_tail(whole, own, call, of)
 
-    for at, part in enumerate(own):
-        without = getattr(measured((whole - part)[np.newaxis], call), of)
+    for at in (0, 1, 2, 4):
+        without = getattr(measured((whole - own[at])[np.newaxis], call), of)
         assert found.lack[at] == (told.lack[0] or without.lack[0])
         np.testing.assert_array_equal(found.value[at], told.value[0] - without.value[0])
-    assert found.lack[3] == Lack.NOT_FINITE
+    assert found.lack[3] != Lack.NONE
+    assert np.isnan(found.value[3])
 
 
 @every_call
@@ -359,7 +407,7 @@ def test_poor_scenarios_give_a_figure_or_a_reason_and_never_harm_their_neighbour
         told = tail.value_at_risk
         if name.startswith("flat"):
             assert (told.lack[at], told.value[at], np.signbit(told.value[at])) == (Lack.NONE, 0, False)
-            assert bounds.value_at_risk.low[at] in (0, np.nan) or np.isnan(bounds.value_at_risk.low[at])
+            assert np.nan_to_num([bounds.value_at_risk.low[at], bounds.value_at_risk.high[at]]).tolist() == [0, 0]
         elif not np.isfinite(row).all():
             assert told.lack[at] == tail.expected_shortfall.lack[at] == Lack.NOT_FINITE
         elif name == "ordinary" and call.method != "cornish_fisher":
@@ -394,7 +442,6 @@ def test_no_subject_is_no_trouble(call):
     assert set(shapes) == {(0,)}
 
 
-SLOW = ("monte_carlo",)
 QUICK = {
     name: CALLS[name]
     for name in ("historical", "age_weighted", "volatility_scaled by ewma", "normal", "cornish_fisher", "student_t")
