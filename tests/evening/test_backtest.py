@@ -510,7 +510,6 @@ def test_every_method_can_be_asked_for(month, arguments):
         "normal",
         "student_t",
         "cornish_fisher",
-        "peaks_over_threshold",
         "monte_carlo",
     )
     chosen = [part for method in methods for part in ("--method", method)]
@@ -711,7 +710,10 @@ def test_one_evening_has_no_outcome_yet(fresh):
         (("--window", "250"), "go with --method"),
         (("--confidence", "0.99"), "go with --method"),
         (("--method", "normal", "--confidence", "99"), "expected one from 0.5 to below 1"),
-        (("--method", "normal", "--confidence", "high"), "expected a number such as 0.99"),
+        (("--method", "normal", "--confidence", "high"), "expected one from 0.5 to below 1, such as 0.99 or 99 %"),
+        (("--method", "normal", "--confidence", "nan"), "found the confidence 'nan'; expected one from 0.5"),
+        (("--method", "peaks_over_threshold", "--window", "40"), "with 4 sessions beyond the threshold in a window"),
+        (("--method", "monte_carlo", "--confidence", "0.99999"), "expected more paths, or a lower confidence"),
         (("--method", "guess"), "'guess' is not one of"),
         (("--from", "2026-04-01", "--to", "2026-03-01"), "--from 2026-04-01 lies after --to 2026-03-01"),
     ],

@@ -41,6 +41,7 @@ CALLS = {
         "monte_carlo", NINETY_NINE, horizon_days=2, drift="sample", distribution="student_t", paths=2_000
     ),
 }
+SEVERAL_DAYS = "monte_carlo, t, drift, two days"
 every_call = pytest.mark.parametrize("call", CALLS.values(), ids=CALLS.keys())
 often = settings(max_examples=15, deadline=None)
 FIGURES = ("value_at_risk", "expected_shortfall")
@@ -271,7 +272,7 @@ OPEN_ABOVE = {  # at 99 % of 500: 100 spans end to end, and weights that leave t
 }
 
 
-@pytest.mark.parametrize("name", CALLS)
+@pytest.mark.parametrize("name", [name for name in CALLS if name != SEVERAL_DAYS])
 def test_ordinary_subjects_have_the_bounds_that_their_method_can_have(name):
     """Lest the tests above pass because there are none."""
     pnl = walks(4, n=500)
@@ -281,6 +282,16 @@ def test_ordinary_subjects_have_the_bounds_that_their_method_can_have(name):
         assert np.isfinite(own.low).all()
         assert (np.isnan(own.high) == is_open).all()
         assert (own.reason == (BoundLack.TOO_FEW if is_open else BoundLack.NONE)).all()
+
+
+def test_several_simulated_days_of_t_have_no_bounds():
+    pnl, call = walks(3, n=500), CALLS[SEVERAL_DAYS]
+    bounds = bound_tail(pnl, call, measured(pnl, call), SEED)
+    for figure in FIGURES:
+        own = getattr(bounds, figure)
+        assert np.isnan(own.low).all()
+        assert np.isnan(own.high).all()
+        assert (own.reason == BoundLack.SEVERAL_DAYS).all()
 
 
 T_DRAWS = TailCall("monte_carlo", NINETY_NINE, distribution="student_t", paths=2_000)

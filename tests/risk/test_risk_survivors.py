@@ -21,6 +21,7 @@ from monitor.risk.coverage import (
 )
 from monitor.risk.figures import Lack
 from monitor.risk.historical import historical, historical_at
+from monitor.risk.leave_one_out import leave_one_out
 from monitor.risk.monte_carlo import monte_carlo
 from monitor.risk.normal import fit_normal, normal, normal_at
 from monitor.risk.order_bounds import weighted_order_bounds
@@ -140,8 +141,23 @@ def test_unless_asked_otherwise_figures_are_of_one_day_without_drift(method, sev
 # --- edges ---------------------------------------------------------------------------------------------------------
 
 
-def test_one_record_can_be_simulated():
-    assert simulate_z2(250, NINETY_NINE, 5.0, random_state("one"), 1).shape == (1,)
+@pytest.mark.parametrize(("days", "paths"), [(250, 1), (1, 250)])
+def test_one_record_and_records_of_one_day_can_be_simulated(days, paths):
+    simulated = simulate_z2(days, NINETY_NINE, 5.0, random_state("one"), paths)
+    assert simulated.shape == (paths,)
+    assert simulated[-1] == 1
+
+
+def test_without_each_of_large_positions_the_tail_of_many_days_is_that_of_historical():
+    """So many days that finding the kth worst leaves its neighbours unsorted."""
+    random = np.random.default_rng(33)
+    own = random.standard_t(4, size=(120, 3000))
+    whole = own + 0.3 * random.standard_t(4, size=own.shape)
+    pairs = np.arange(len(own))
+    found = leave_one_out(whole, own, pairs, pairs, Decimal("0.9"))
+    want = historical(whole - own, Decimal("0.9"))
+    np.testing.assert_array_equal(found.value_at_risk.value, want.value_at_risk.value)
+    np.testing.assert_array_equal(found.expected_shortfall.value, want.expected_shortfall.value)
 
 
 def test_the_error_of_a_critical_value_near_the_top_takes_one_neighbour():
@@ -168,9 +184,10 @@ def test_excesses_that_overflow_cost_their_row_the_fit_and_no_other():
 
 
 def test_a_drift_beyond_the_doubles_is_no_warning():
-    rows = np.stack([np.full(300, 1.7e308), WALK])
+    """The sum of the ten scenarios is a double, twenty days of their mean are not."""
+    rows = np.stack([np.full(10, 1.7e307), WALK[:10]])
     with np.errstate(all="raise"):
-        found = monte_carlo(rows, NINETY_NINE, NAMES[:2], horizon_days=2, drift="sample", paths=2000)
+        found = monte_carlo(rows, NINETY_NINE, NAMES[:2], horizon_days=20, drift="sample", paths=2000)
     assert found.value_at_risk.lack.tolist() == [Lack.CONSTANT, Lack.NONE]
 
 
