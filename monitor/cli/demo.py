@@ -64,6 +64,7 @@ def demo(folder: Path) -> int:
     console.print(f"  the notices               {folder / 'tray'}", soft_wrap=True)
     console.print(f"  the register              duskcheck excess list --state all --site {site_file}", soft_wrap=True)
     console.print(f"  any evening's page        duskcheck report --date 2025-06-16 --site {site_file}", soft_wrap=True)
+    console.print(f"  how the model has done    duskcheck backtest --site {site_file}", soft_wrap=True)
     console.print(f"  proof of the record       duskcheck ledger verify --site {site_file}", soft_wrap=True)
     if differing:
         click.echo(f"duskcheck: these evenings differ from the record: {', '.join(differing)}", err=True)
