@@ -78,11 +78,14 @@ def _judged(track: Track, question: Question, own: OwnPnl, terms: Terms) -> Iter
     asked = np.array([question.within(day) for day in track.days], dtype=np.bool_)
     actual = np.array([_own_pnl(track.subject, day, own) for day in track.days])
     for method in track.asked if asked.any() else ():
-        value_at_risk, shortfall, places = np.array(track.made[method.name]).T
-        forecasts = Forecasts(value_at_risk, shortfall, places if np.isfinite(places).any() else None)
+        value_at_risk, shortfall, places, tried = np.array(track.made[method.name]).T
+        known = places if np.isfinite(places).any() else None
+        forecasts = Forecasts(value_at_risk, shortfall, known, tried > 0)
         trials = Trials(tuple(track.days), forecasts, np.array(track.pnl), actual, np.array(track.carried), asked)
         judgement = judge(trials, method.call, terms.record, terms.firm.site)
-        missing = [track.reasons[day] for day in judgement.missing_days if day in track.reasons]
+        lacks = track.lacks.get(method.name, {})
+        why = {day: track.reasons.get(day) or lacks.get(day) for day in judgement.missing_days}
+        missing = [reason or f"no P&L of {day} is known" for day, reason in why.items()]
         reasons = [track.lack] if track.lack else missing
         yield Record(track.subject, track.currency, method, judgement, tuple(dict.fromkeys(reasons)))
 
@@ -135,7 +138,7 @@ def _recorded_of(
             pnl = outcome.pnl if outcome else None
             track.enter(day, pnl, carried=False, reason=_why_missing(before, day, told, outcome))
             figures = (told.value_at_risk, told.expected_shortfall) if told else (None, None)
-            row = np.array([np.nan if value is None else value for value in (*figures, None)])
+            row = np.array([np.nan if value is None else value for value in (*figures, None, 1.0)])
             track.made.setdefault(track.asked[0].name, []).append(row)
     return list(tracks.values())
 

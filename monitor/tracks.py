@@ -25,6 +25,7 @@ from monitor.world import Floats, MeasureCall, Terms, World
 
 AT_ONCE = 512  # forecasts made together
 LOOK_BACK = 10  # sessions of any calendar before the first outcome: a holiday of one must not lose its evening before
+NOT_TRIED = (np.nan, np.nan, np.nan, 0.0)  # a row of `Track.made`
 UNKNOWN = Outcome(None, None, carried=False)
 DEFAULT, CHALLENGER, NAMED = "default", "challenger", "asked for"
 Progress = Callable[[Sequence[Any], str], Iterable[Any]]
@@ -71,7 +72,8 @@ class Track:
 
     days: of outcomes, also some before those that the question asks about. pnl: NaN where not known. carried: whether
     it rests in part on an older price or rate. made: by method, a row a day: value at risk, shortfall and transform,
-    NaN where there is none. reasons: by day, why outcome or forecast is not known. lack: why there is no forecast at
+    NaN where there is none, and whether the method was asked at all. lacks: by method and day, why it then had no
+    figure. reasons: by day, why outcome or forecast is not known. lack: why there is no forecast at
     all. recent: its newest scenarios.
     """
 
@@ -82,6 +84,7 @@ class Track:
     pnl: list[float] = field(default_factory=list)
     carried: list[bool] = field(default_factory=list)
     made: dict[str, list[Floats]] = field(default_factory=dict)
+    lacks: dict[str, dict[date, str]] = field(default_factory=dict)
     reasons: dict[date, str] = field(default_factory=dict)
     lack: str | None = None
     recent: Floats = field(default_factory=lambda: np.empty(0))
@@ -220,7 +223,7 @@ def _with_positions_then(worlds: Worlds, question: Question, progress: Progress)
     """Evening by evening: what each subject's positions of then forecast, and what they made on its next session."""
     tracks: dict[str, Track] = {}
     waiting: dict[str, Trial] = {}
-    ready: list[tuple[Trial, float]] = []
+    ready: list[tuple[Trial, date, float]] = []
     for day in progress(worlds.evenings(question), "Evenings"):
         world = worlds.on(day)
         valuation = Valuation(world)
@@ -230,7 +233,7 @@ def _with_positions_then(worlds: Worlds, question: Question, progress: Progress)
             trial = waiting.pop(key)
             outcome = came.get(key, UNKNOWN)
             trial.track.enter(day, outcome.pnl, outcome.carried, trial.reason or outcome.reason)
-            ready.append((trial, trial.track.pnl[-1]))
+            ready.append((trial, day, trial.track.pnl[-1]))
             not_known = _why_not_known(trial.track.subject, world)
             if not_known:
                 waiting[key] = replace(trial, reasons=dict.fromkeys(worlds.windows, not_known))
@@ -272,26 +275,30 @@ def _trials(
             )
 
 
-def _forecast(ready: Iterable[tuple[Trial, float]]) -> None:
+def _forecast(ready: Iterable[tuple[Trial, date, float]]) -> None:
     """Write what was forecast of trials, in time order with their outcomes, into the tracks: a method at a time."""
-    methods: dict[str, tuple[Asked, list[tuple[Trial, float]]]] = {}
-    for trial, pnl in ready:
+    methods: dict[str, tuple[Asked, list[tuple[Trial, date, float]]]] = {}
+    for trial, day, pnl in ready:
         for own in trial.track.asked:
-            methods.setdefault(own.name, (own, []))[1].append((trial, pnl))
+            methods.setdefault(own.name, (own, []))[1].append((trial, day, pnl))
     for name, (own, trials) in methods.items():
-        made = np.full((len(trials), 3), np.nan)
-        able = [at for at, (trial, _) in enumerate(trials) if trial.possible(own.window)]
+        made = np.tile(NOT_TRIED, (len(trials), 1))
+        able = [at for at, (trial, _, _) in enumerate(trials) if trial.possible(own.window)]
         if able:
             rows = np.array([trials[at][0].scenarios[-own.window :] for at in able])
-            came = np.array([trials[at][1] for at in able])
-            made[able] = _columns(forecast(own.call, rows, came, [trials[at][0].names for at in able]))
-        for (trial, _), row in zip(trials, made, strict=True):
+            came = np.array([trials[at][2] for at in able])
+            found = forecast(own.call, rows, came, [trials[at][0].names for at in able])
+            made[able] = _columns(found)
+            for at, reason in found.why.items():
+                trial, day, _ = trials[able[at]]
+                trial.track.lacks.setdefault(name, {})[day] = reason
+        for (trial, _, _), row in zip(trials, made, strict=True):
             trial.track.made.setdefault(name, []).append(row)
 
 
 def _columns(made: Forecasts) -> Floats:
     places = np.full(len(made.value_at_risk), np.nan) if made.transform is None else made.transform
-    return np.stack([made.value_at_risk, made.expected_shortfall, places], axis=1)
+    return np.stack([made.value_at_risk, made.expected_shortfall, places, made.tried], axis=1)
 
 
 def _with_todays_positions(worlds: Worlds, question: Question, progress: Progress) -> list[Track]:
@@ -306,8 +313,9 @@ def _with_todays_positions(worlds: Worlds, question: Question, progress: Progres
         for at in wanted:
             for own in asked(part.subjects[at]):
                 methods.setdefault(own.name, (own, []))[1].append(at)
+        lacks: dict[int, dict[str, dict[date, str]]] = {at: {} for at in wanted}
         made = {
-            name: dict(zip(rows, _over_all(own, part, rows, worlds.terms, sessions, progress), strict=True))
+            name: dict(zip(rows, _over_all(own, part, rows, worlds.terms, sessions, lacks, progress), strict=True))
             for name, (own, rows) in methods.items()
         }
         tracks += [
@@ -319,6 +327,7 @@ def _with_todays_positions(worlds: Worlds, question: Question, progress: Progres
                 pnl=part.pnl[at, 1:].tolist(),
                 carried=part.carried[at, 1:].tolist(),
                 made={own.name: list(made[own.name][at][:-1]) for own in asked(part.subjects[at])},
+                lacks=lacks[at],
                 lack=part.reasons[at],
                 recent=part.pnl[at, len(sessions) - int(part.sessions[at]) :],
             )
@@ -328,15 +337,24 @@ def _with_todays_positions(worlds: Worlds, question: Question, progress: Progres
 
 
 def _over_all(
-    own: Asked, part: Series, rows: Sequence[int], terms: Terms, sessions: Sequence[date], progress: Progress
+    own: Asked,
+    part: Series,
+    rows: Sequence[int],
+    terms: Terms,
+    sessions: Sequence[date],
+    lacks: Mapping[int, dict[str, dict[date, str]]],
+    progress: Progress,
 ) -> Iterator[Floats]:
-    """For each of some subjects the forecasts made on every session, (sessions, 3): NaN where none can be made."""
+    """For each of some subjects the forecasts made on every session, (sessions, 4), as in `Track.made`.
+
+    lacks: by subject, to be filled as `Track.lacks`.
+    """
     pnl = part.pnl[list(rows)]
     window, known = own.window, part.fit[own.window]
     quick = quick_forecast(own.call, pnl)
     text = f"{own.call.parameters['method']}, {window} sessions"
     for place, at in enumerate(progress(rows, text) if len(rows) > 1 else rows):
-        made = np.full((pnl.shape[1], 3), np.nan)
+        made = np.tile(NOT_TRIED, (pnl.shape[1], 1))
         ends = np.flatnonzero(known[at, :-1])
         blocks = [ends[start : start + AT_ONCE] for start in range(0, len(ends), AT_ONCE)]
         for block in progress(blocks, text) if len(rows) == 1 and quick is None else blocks:
@@ -344,7 +362,10 @@ def _over_all(
             came = pnl[place, block + 1]
             if quick is None:
                 names = [(terms.firm.site, str(sessions[end]), part.subjects[at].key) for end in block.tolist()]
-                made[block] = _columns(forecast(own.call, windows, came, names))
+                found = forecast(own.call, windows, came, names)
             else:
-                made[block] = _columns(quick.of(place, block, windows, came))
+                found = quick.of(place, block, windows, came)
+            made[block] = _columns(found)
+            days = {sessions[int(block[row]) + 1]: reason for row, reason in found.why.items()}
+            lacks[at].setdefault(own.name, {}).update(days)
         yield made

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import date
 from decimal import Decimal
 from functools import lru_cache
@@ -23,6 +23,7 @@ from monitor.risk.coverage import (
     transitions,
 )
 from monitor.risk.exceptions import Exceptions, find_exceptions, larger_count
+from monitor.risk.figures import LACK_TEXT, Lack
 from monitor.risk.goodness import describe_fit
 from monitor.risk.methods import measure_tail, transform_outcomes
 from monitor.risk.randomness import random_state
@@ -36,7 +37,7 @@ REJECTED_AT = 0.05
 Z2_PATHS = 20_000
 # Student's t that the critical values of Z2 are simulated for: the fitted degrees of freedom, rounded down to one of
 # these, so that the tail is never taken as thinner than it was found.
-Z2_TAILS = (3.0, 4.0, 5.0, 7.0, 10.0, 20.0, 100.0)
+Z2_TAILS = (2.01, 2.5, 3.0, 4.0, 5.0, 7.0, 10.0, 20.0, 100.0)
 HYPOTHETICAL, ACTUAL = "hypothetical", "actual"  # whose P&L
 NO_TRANSFORM = "only the figures are known, not the whole distribution"
 
@@ -45,17 +46,21 @@ NO_TRANSFORM = "only the figures are known, not the whole distribution"
 class Forecasts:
     """Of each record, (records,), NaN where there is none.
 
-    transform: where the outcome lies in the forecast distribution; None where only the figures are known.
+    transform: where the outcome lies in the forecast distribution; None where only the figures are known. tried:
+    whether the method was asked at all; where it was and there is no figure, it has none to give. why: by record, what
+    it then lacked.
     """
 
     value_at_risk: Floats
     expected_shortfall: Floats
     transform: Floats | None
+    tried: Booleans
+    why: Mapping[int, str] = field(default_factory=dict)
 
     def on(self, days: Booleans) -> Forecasts:
         """Those of some of the records."""
         places = None if self.transform is None else self.transform[days]
-        return Forecasts(self.value_at_risk[days], self.expected_shortfall[days], places)
+        return Forecasts(self.value_at_risk[days], self.expected_shortfall[days], places, self.tried[days])
 
 
 @dataclass(frozen=True)
@@ -138,7 +143,10 @@ def forecast(call: MeasureCall, scenarios: Floats, outcomes: Floats, names: Sequ
     asked = tail_call(call.parameters)
     tail = measure_tail(scenarios, asked, names)
     places = transform_outcomes(outcomes, scenarios, asked)
-    return Forecasts(tail.value_at_risk.value, tail.expected_shortfall.value, places)
+    figures = tail.value_at_risk
+    why = {at: LACK_TEXT[Lack(figures.lack[at])] for at in np.flatnonzero(figures.lack != Lack.NONE).tolist()}
+    tried = np.ones(len(outcomes), dtype=np.bool_)
+    return Forecasts(figures.value, tail.expected_shortfall.value, places, tried, why)
 
 
 @dataclass(frozen=True)
@@ -153,7 +161,8 @@ class QuickForecast:
         """The forecasts of one series from the windows that end on some days, as `forecast` gives them."""
         rows = ends - self.call.parameters["window"] + 1
         places = transform_outcomes(outcomes, scenarios, tail_call(self.call.parameters))
-        return Forecasts(self.value_at_risk[place, rows], self.expected_shortfall[place, rows], places)
+        tried = np.ones(len(ends), dtype=np.bool_)
+        return Forecasts(self.value_at_risk[place, rows], self.expected_shortfall[place, rows], places, tried)
 
 
 def quick_forecast(call: MeasureCall, pnl: Floats) -> QuickForecast | None:
@@ -175,9 +184,9 @@ def describe(pnl: Floats) -> tuple[str, ...]:
 def judge(trials: Trials, call: MeasureCall, terms: RecordTerms, site: str) -> Judgement:
     """Everything that the record of one method for one subject says.
 
-    Days before the first forecast don't count, and by actual P&L neither do days before the first that is known; later
-    ones without forecast or P&L are missing. A subject without any actual P&L, as every position and the firm, is
-    judged by the hypothetical one whatever the terms say.
+    Days before the first on which the method was asked don't count, and by actual P&L neither do days before the first
+    that is known; later ones without forecast or P&L are missing. A subject without any actual P&L, as every position
+    and the firm, is judged by the hypothetical one whatever the terms say.
     """
     confidence: Decimal = call.parameters["confidence"]
     asked = trials.asked
@@ -219,10 +228,11 @@ def judge(trials: Trials, call: MeasureCall, terms: RecordTerms, site: str) -> J
 
 def _exceptions(name: str, pnl: Floats, trials: Trials, terms: RecordTerms) -> Exceptions:
     """Those on the days asked for, by one kind of P&L."""
-    var = trials.forecasts.value_at_risk
+    var, tried = trials.forecasts.value_at_risk, trials.forecasts.tried
     if name == ACTUAL:
-        var = np.where(np.logical_or.accumulate(np.isfinite(pnl)), var, np.nan)
-    found = find_exceptions(pnl[np.newaxis, :], var[np.newaxis, :], terms.missing_counts)
+        told = np.logical_or.accumulate(np.isfinite(pnl))
+        var, tried = np.where(told, var, np.nan), tried & told
+    found = find_exceptions(pnl[np.newaxis, :], var[np.newaxis, :], terms.missing_counts, tried[np.newaxis, :])
     asked = trials.asked
     return Exceptions(found.hit[:, asked], found.counted[:, asked], found.missing[:, asked])
 

@@ -44,9 +44,9 @@ def historical_bounds(
     (Manistre and Hancock 2005, "Variance of the CTE estimator"), and t = (ES* - ES) / e* in each resample, the bounds
     are ES - t_(975) e and ES - t_(25) e (Efron 1982, The Jackknife, the Bootstrap and Other Resampling Plans, section
     10.10; Hall 1988, "Theoretical comparison of bootstrap confidence intervals"). Where the tail has no spread, so that
-    e is 0, they are the 25th from either end of the ES* themselves. ES is at least VaR: its upper bound is never put
-    below that of VaR, where VaR has none ES has none, and where too many resamples have a tail of one scenario alone
-    to say how low ES may be, the lower bound of VaR stands for its own.
+    e is 0, they are the 25th from either end of the ES* themselves. ES is at least VaR: neither bound is ever put
+    below that of VaR, where VaR has no upper one ES has none, and where too many resamples have a tail of one scenario
+    alone to say how low ES may be, the lower bound of VaR stands for its own.
 
     Drawn from the ranks: a resample takes so many of the worst, of the second worst, ..., whatever their values, so
     that each subject costs a weighted sum of its few worst. Measured for n = 500 (5 in the tail at 99 %) and 1,000, at
@@ -71,7 +71,7 @@ def historical_bounds(
             for start in range(0, subjects, _BLOCK):
                 rows = slice(start, start + _BLOCK)
                 low[rows], high[rows] = _studentised(worst[rows], weights, last, share)
-            low = np.where(np.isneginf(low), value_at_risk.low, low * root)
+            low = np.fmax(np.where(np.isneginf(low), value_at_risk.low, low * root), value_at_risk.low)
             high = np.maximum(high * root, value_at_risk.high)
     endless = np.isposinf(high)
     high[endless] = np.nan
@@ -209,7 +209,7 @@ def age_weighted_bounds(
         simulated = _resampled(scenarios, drawn, float(share) * (1 - ROUNDING), float(share))
         with np.errstate(all="ignore"):
             low, high = simulated[2:] * root_of_time(horizon_days)
-            high = np.maximum(high, value_at_risk.high)
+            low, high = np.fmax(low, value_at_risk.low), np.maximum(high, value_at_risk.high)
         if bounding_ranks(speaking, share)[1] is None:
             high[:] = np.nan
             reason = np.full(subjects, BoundLack.TOO_FEW, dtype=np.int8)

@@ -9,7 +9,7 @@ from fractions import Fraction
 import numpy as np
 
 from monitor.risk.figures import Codes, Figures, Floats, Lack
-from monitor.risk.tail import Tail
+from monitor.risk.tail import SimulatedTail, Tail
 
 EACH_SIDE = Fraction(1, 40)  # 2.5 % on each side: two-sided bounds at 95 %
 NORMAL_QUANTILE = 1.959963984540054  # of the standard normal at 97.5 %
@@ -86,16 +86,24 @@ def no_bounds(tail: Tail, reason: BoundLack) -> TailBounds:
 
 
 def moved_bounds(bounds: TailBounds, of: Tail, tail: Tail) -> TailBounds:
-    """The bounds of one tail as those of another that estimates the same: each as far from its figure as it was."""
+    """The bounds of one tail as those of another that estimates the same: each as far from its figure as it was.
 
-    def moved(own: Bounds, figures: Figures, to: Figures) -> Bounds:
-        by = to.value - figures.value
-        return Bounds.of(to, own.low + by, own.high + by, own.reason)
+    Where the other is simulated, its own standard errors are added in squares on each side (Zou and Donner 2008).
+    """
 
-    return TailBounds(
-        moved(bounds.value_at_risk, of.value_at_risk, tail.value_at_risk),
-        moved(bounds.expected_shortfall, of.expected_shortfall, tail.expected_shortfall),
-    )
+    def moved(own: Bounds, figures: Figures, to: Figures, error: Floats) -> Bounds:
+        down, up = (np.hypot(side - figures.value, NORMAL_QUANTILE * error) for side in (own.low, own.high))
+        return Bounds.of(to, to.value - down, to.value + up, own.reason)
+
+    none = np.zeros(len(tail.note))
+    at_risk, beyond = none, none
+    if isinstance(tail, SimulatedTail):
+        at_risk, beyond = np.nan_to_num(tail.value_at_risk_error), np.nan_to_num(tail.expected_shortfall_error)
+    with np.errstate(all="ignore"):
+        return TailBounds(
+            moved(bounds.value_at_risk, of.value_at_risk, tail.value_at_risk, at_risk),
+            moved(bounds.expected_shortfall, of.expected_shortfall, tail.expected_shortfall, beyond),
+        )
 
 
 def ends(simulated: Floats) -> tuple[Floats, Floats]:

@@ -60,13 +60,16 @@ class LargerCount:
     from_actual: Booleans
 
 
-def find_exceptions(pnl: Floats, value_at_risk: Floats, missing_is_exception: bool = False) -> Exceptions:
+def find_exceptions(
+    pnl: Floats, value_at_risk: Floats, missing_is_exception: bool = False, tried: Booleans | None = None
+) -> Exceptions:
     """An exception is a day whose loss is strictly larger than value at risk: -pnl > value at risk.
 
     pnl, value_at_risk: (subjects, days), profit positive and value at risk positive when a loss, in one unit.
     Days before the first forecast of a subject don't count. A later day without profit or loss, or without forecast,
     is named as missing and doesn't count, unless missing_is_exception: then it is an exception (MAR32.5(2) of the
     Basel framework, for days on which either is unavailable or impossible to compute).
+    tried: alike, days on which a forecast was tried, with a figure or without; the record begins with the first.
     Scaling both by one positive factor changes nothing; a larger forecast never adds an exception; a row alone is the
     row in a block. Raises ValueError when the two have different shapes or not two axes.
     """
@@ -78,7 +81,8 @@ def find_exceptions(pnl: Floats, value_at_risk: Floats, missing_is_exception: bo
         )
     forecast = np.isfinite(value_at_risk)
     known = forecast & np.isfinite(pnl)
-    missing = np.logical_or.accumulate(forecast, axis=1) & ~known
+    begun = forecast if tried is None else forecast | tried
+    missing = np.logical_or.accumulate(begun, axis=1) & ~known
     with np.errstate(invalid="ignore"):
         hit = known & (-pnl > value_at_risk)
     if missing_is_exception:

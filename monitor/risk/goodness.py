@@ -151,7 +151,8 @@ def _about_shape(normality: Normality, tail: TailIndex, at: int) -> tuple[str, s
     """What is said of the distribution, and what follows for the figures, empty when nothing does."""
     if normality.lack[at] != Lack.NONE:
         return f"Not tested whether normal ({LACK_TEXT[Lack(normality.lack[at])]})", ""
-    grounds = f"(Jarque-Bera {_p(normality.p_value[at])}, {_about_tail(tail, at)})"
+    shape = f"Jarque-Bera {_p(normality.p_value[at])}, excess kurtosis {normality.excess_kurtosis[at]:.1f}"
+    grounds = f"({shape}; {_about_tail(tail, at)})"
     if normality.p_value[at] >= SIGNIFICANCE:
         return f"Nothing speaks against the normal {grounds}", ""
     if normality.excess_kurtosis[at] <= 0:
@@ -162,7 +163,8 @@ def _about_shape(normality: Normality, tail: TailIndex, at: int) -> tuple[str, s
 def _about_tail(tail: TailIndex, at: int) -> str:
     if tail.lack[at] != Lack.NONE:
         return f"no tail index: {LACK_TEXT[Lack(tail.lack[at])]}"
-    return f"tail index {tail.value[at]:.1f} where the normal has {tail.under_normal:.1f}, {_p(tail.p_value[at])}"
+    usual = f"about {tail.under_normal:.1f} in samples of the normal"
+    return f"tail index of losses {tail.value[at]:.1f}, {usual}, {_p(tail.p_value[at])}"
 
 
 def _about_order(clusters: Clusters, lags: int, at: int) -> tuple[str, str]:

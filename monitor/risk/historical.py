@@ -23,7 +23,8 @@ def historical(pnl: Floats, confidence: Decimal, horizon_days: int = 1) -> Tail:
     value at risk = -P_(k), k = ceil(m), the convention of Hull (RMFI, ch. 13);
     expected shortfall = -(P_(1) + ... + P_(j) + (m - j) P_(j+1)) / m, j = floor(m) (Acerbi and Tasche 2002, "On the
     coherence of expected shortfall"), or -P_(1) with exact_tail False when m < 1.
-    Beyond one day both grow with the square root of the horizon.
+    Beyond one day both grow with the square root of the horizon: too little where days are positively autocorrelated,
+    too much where negatively, and too much far out in the tail where single days are fat-tailed, whose sums thin out.
 
     Holds for both: positive homogeneity, translation (by one day's sure gain), monotonicity in the scenarios and in
     the confidence, value at risk <= shortfall, no dependence on the order of scenarios, a row alone = the row in a

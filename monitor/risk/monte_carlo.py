@@ -1,16 +1,16 @@
 """Simulation of a book over its instruments' joint returns, multivariate normal or multivariate Student t.
 
 A book is a sum over its instruments, and any sum of jointly normal (jointly t) profits is normal (t with the same
-degrees of freedom) again. So nothing is lost by drawing the book's own profit instead of every instrument's: the book's
-scenario P&L already holds how its instruments move together. Books are drawn apart from each other, so that the figure
-of one never depends on which others are measured with it; what they earn together is the scenario P&L of the firm.
+degrees of freedom) again. So, for a given distribution, nothing is lost by drawing the book's own profit instead of
+every instrument's: the book's scenario P&L already holds how its instruments move together. Of the joint distribution
+two things are not used: the degrees of freedom are fitted to each book by itself, and books are drawn apart from each
+other, so that the figure of one never depends on which others are measured with it.
 """
 
 from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
 from decimal import Decimal
 from fractions import Fraction
 from typing import get_args
@@ -22,22 +22,12 @@ from monitor.risk.normal import fit_normal
 from monitor.risk.probability import Distribution
 from monitor.risk.randomness import random_state
 from monitor.risk.student_fit import StudentFit, fit_student
-from monitor.risk.tail import Drift, Tail, root_of_time, tail_share
+from monitor.risk.tail import Drift, SimulatedTail, root_of_time, tail_share
 
 PATHS = 100_000
 LEAST_IN_TAIL = 10  # fewer paths beyond value at risk give no error of it worth telling; a cautious choice, no source
 
 _NEAR = 10  # times the tail's share: the draws of one day that are looked at first
-
-
-@dataclass(frozen=True)
-class SimulatedTail(Tail):
-    """The tail, and the standard error that each figure has from drawing only so many paths, (subjects,), in the unit
-    of the scenarios, NaN where there is no figure. They say nothing of the error of the fit.
-    """
-
-    value_at_risk_error: Floats
-    expected_shortfall_error: Floats
 
 
 def monte_carlo(
@@ -57,7 +47,7 @@ def monte_carlo(
     Over h days the profit is h m plus the sum of h independent days. For the normal that sum is normal again and is
     drawn at once; for t every day is drawn, so that tails thin out as they should, while `student_t` keeps nu and
     scales by the root of time: at 99 % over ten days that overstates value at risk by 9 % and expected shortfall by
-    21 % at nu 5, by 7 % and 20 % at nu 3.
+    21 % at nu 5, by 7 % and 21 % at nu 3.
 
     Standard errors, with a = 1 - confidence, N paths and f the density: of value at risk sqrt(a (1 - a) / N) / f(-VaR)
     (Kendall and Stuart 1972), taken as half the distance between the order statistics sqrt(N a (1 - a)) before and

@@ -68,6 +68,9 @@ def normal(pnl: Floats, confidence: Decimal, horizon_days: int = 1, drift: Drift
     row in a block to the last bit; translation (by one day's sure gain, h times) for drift sample only; sub-additivity
     of the shortfall, and of the value at risk at 50 % or more. Not monotone in the scenarios: a larger profit widens
     sigma.
+
+    The root of time is exact for independent normal days; it says too little where days are positively autocorrelated,
+    too much where negatively.
     """
     return normal_at(pnl, [confidence], horizon_days, drift)[0]
 

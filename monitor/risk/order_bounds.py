@@ -40,7 +40,7 @@ def order_bounds(pnl: Floats, confidence: Decimal, horizon_days: int = 1) -> Bou
     that clusters makes the true coverage smaller. Ranks move in whole steps, so that on independent scenarios at least
     95 % are covered; measured at 99 % 98.4 (n = 250, upper side always open), 98 (500) and 98 % (1,000), at 97.5 %
     96, 97 and 95.6 %, the same for the normal and for t(4). Beyond one day both ends grow with the square root of the
-    horizon; how good that approximation is, the bounds do not say.
+    horizon; how good that approximation is (see `historical`), the bounds do not say.
 
     Hold: positive homogeneity, monotonicity, translation, as for the figure; the order of scenarios does not matter; a
     row alone = the row in a block.

@@ -43,7 +43,9 @@ def loss_probability(
     one day, an approximation.
     historical: the share of scenarios whose loss, times sqrt(h), is strictly larger than the threshold; a multiple of
     1/n, and 0 beyond the worst scenario, which does not mean impossible. The root of time is an approximation there
-    too: for scenarios of h days ask with a horizon of 1. The scenarios bring their own mean: drift does nothing.
+    too: for scenarios of h days ask with a horizon of 1. The root errs as for value at risk: a loss is likelier than
+    told where days are positively autocorrelated, less likely far out where single days are fat-tailed. The scenarios
+    bring their own mean: drift does nothing.
     A flat book (all scenarios 0) loses 0 for certain.
     Properties: unchanged when scenarios and threshold are multiplied alike; does not rise with the threshold; a row
     alone is the row in a block.

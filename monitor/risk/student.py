@@ -70,7 +70,8 @@ def match_kurtosis(pnl: Floats, drift: Drift) -> StudentFit:
 def student_t(
     pnl: Floats, confidence: Decimal, horizon_days: int = 1, drift: Drift = "zero", fit: FitBy = "likelihood"
 ) -> Tail:
-    """Value at risk -h m + sqrt(h) s q with q the quantile of t(nu), s its scale (not its deviation); shortfall alike.
+    """Value at risk -h m + sqrt(h) s q with q the quantile of t(nu), s its scale (not its deviation); shortfall alike
+    (McNeil, Frey and Embrechts 2015, Quantitative Risk Management, section 2.3).
 
     pnl: (subjects, n), n >= 2. m is 0 for drift zero. fit: by maximum likelihood (`fit_student`) or by matching
     deviation and kurtosis (`match_kurtosis`); ValueError for any other. Where the normal stands in, the note of the

@@ -71,6 +71,9 @@ _FINE = _Search(rounds=100, gain=1e-12, close=1e-5, rounding=1e-8)
 def fit_student(pnl: Floats, drift: Drift) -> StudentFit:
     """Maximum likelihood of scale and degrees of freedom; location 0 for drift zero, fitted for drift sample.
 
+    The density of z = (x - m) / s is Gamma((nu + 1) / 2) / (sqrt(nu pi) Gamma(nu / 2)) (1 + z^2 / nu)^(-(nu + 1) / 2)
+    (Lange, Little and Taylor 1989, "Robust statistical modeling using the t distribution").
+
     pnl: (subjects, n). The normal of `fit_normal` stands in for a subject with too few scenarios, with too many equal
     ones, without a maximum at finite degrees of freedom, or whose fit does not settle.
     """

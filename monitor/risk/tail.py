@@ -9,7 +9,7 @@ from enum import IntEnum
 from fractions import Fraction
 from typing import Literal, get_args
 
-from monitor.risk.figures import Codes, Figures
+from monitor.risk.figures import Codes, Figures, Floats
 
 Drift = Literal["zero", "sample"]
 
@@ -27,6 +27,7 @@ class FitNote(IntEnum):
     INSIDE_THRESHOLD = 7
     ONE_SCENARIO = 8
     SHAPE_AT_FLOOR = 9
+    SCALED_FAR = 10
 
 
 FIT_NOTE_TEXT: dict[FitNote, str] = {
@@ -40,6 +41,7 @@ FIT_NOTE_TEXT: dict[FitNote, str] = {
     FitNote.INSIDE_THRESHOLD: "historical: the confidence lies inside the threshold, where no tail is fitted",
     FitNote.ONE_SCENARIO: "one scenario alone outweighs the tail: the shortfall is that scenario, no mean of several",
     FitNote.SHAPE_AT_FLOOR: "peaks over threshold with the shape of its tail held at the lowest allowed",
+    FitNote.SCALED_FAR: "a scenario of the tail is scaled more than tenfold: it comes from a time of hardly any moves",
 }
 
 
@@ -57,6 +59,16 @@ class Tail:
     note: Codes
 
 
+@dataclass(frozen=True)
+class SimulatedTail(Tail):
+    """The tail, and the standard error that each figure has from drawing only so many paths, (subjects,), in the unit
+    of the scenarios, NaN where there is no figure. They say nothing of the error of the fit.
+    """
+
+    value_at_risk_error: Floats
+    expected_shortfall_error: Floats
+
+
 def tail_share(confidence: Decimal) -> Fraction:
     """1 - confidence, exactly. As floats 1 - 0.99 is above 0.01 and would put the 5th of 500 worst at the 6th.
 
@@ -64,7 +76,7 @@ def tail_share(confidence: Decimal) -> Fraction:
     """
     if not isinstance(confidence, Decimal):
         raise TypeError(f"the confidence must be a Decimal (got {confidence!r})")
-    if not (confidence.is_finite() and 0 < confidence < 1):
+    if not (confidence.is_finite() and 0 < confidence < 1 and float(1 - Fraction(confidence)) > 0):
         raise ValueError(f"the confidence must be above 0 and below 1 (got {confidence})")
     return 1 - Fraction(confidence)
 

@@ -79,6 +79,10 @@ def check_decay(decay: float) -> None:
 
 
 def annualised(volatility: Figures, days_a_year: float) -> Figures:
-    """Volatility a year from volatility a session, by the square root of time (sessions independent)."""
+    """Volatility a year from volatility a session, by the square root of time.
+
+    Exact for the variance of independent sessions; too low where they are positively autocorrelated, too high where
+    negatively.
+    """
     with np.errstate(all="ignore"):
         return Figures.of(volatility.value * math.sqrt(days_a_year), volatility.lack)

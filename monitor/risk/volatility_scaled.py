@@ -12,10 +12,12 @@ from monitor.risk.figures import Booleans, Codes, Figures, Floats, Lack, screen
 from monitor.risk.garch import conditional_variances, fit_garch
 from monitor.risk.historical import historical
 from monitor.risk.moments import constant
-from monitor.risk.tail import FitNote, Tail
+from monitor.risk.tail import FitNote, Tail, root_of_time
 from monitor.risk.volatility import check_decay, ewma_variances
 
 Scaling = Literal["ewma", "garch"]
+
+FAR = 10  # times that volatility has grown since; a cautious choice, no source
 
 _BLOCK = 256
 
@@ -95,7 +97,8 @@ def volatility_scaled(pnl: Floats, confidence: Decimal, horizon_days: int, scali
 
     pnl: (subjects, n), n >= 1, in time order. The paper scales the changes of each market price; here it is the P&L
     of the subject, which is one series for a position, a book or the firm. decay is needed with garch too, where EWMA
-    stands in; the note of the subject says where it does.
+    stands in; the note of the subject says where it does, and where a scenario of the tail was scaled more than FAR
+    times (after a calm of hardly any moves a long position can so lose more than it is worth).
 
     Hold: positive homogeneity, VaR <= ES, more confidence never less risk, a row alone = the row in a block. Not:
     monotonicity, translation, sub-additivity of ES (each subject has factors of its own). The order of scenarios
@@ -112,8 +115,16 @@ def volatility_scaled(pnl: Floats, confidence: Decimal, horizon_days: int, scali
         _with_lack(tail.value_at_risk, scaled.lack),
         _with_lack(tail.expected_shortfall, scaled.lack),
         exact_tail=tail.exact_tail,
-        note=scaled.note,
+        note=_note(scaled, tail.value_at_risk, horizon_days),
     )
+
+
+def _note(scaled: ScaledScenarios, value_at_risk: Figures, horizon_days: int) -> Codes:
+    """SCALED_FAR where a scenario at or beyond value at risk was scaled so far that it says little of today."""
+    with np.errstate(all="ignore"):
+        beyond = scaled.scenarios * root_of_time(horizon_days) <= -value_at_risk.value[:, np.newaxis]
+        far = (beyond & (scaled.scenarios != 0) & (scaled.factors > FAR)).any(axis=1)
+    return np.where(far & (scaled.note == FitNote.AS_ASKED), FitNote.SCALED_FAR, scaled.note).astype(np.int8)
 
 
 def _with_lack(figures: Figures, lack: Codes) -> Figures:

@@ -41,6 +41,7 @@ CALLS = {
         "monte_carlo", NINETY_NINE, horizon_days=2, drift="sample", distribution="student_t", paths=2_000
     ),
 }
+SCALED = TailCall("volatility_scaled", NINETY_NINE)
 SEVERAL_DAYS = "monte_carlo, t, drift, two days"
 every_call = pytest.mark.parametrize("call", CALLS.values(), ids=CALLS.keys())
 often = settings(max_examples=15, deadline=None)
@@ -312,7 +313,34 @@ def test_bounds_of_a_like_method_are_as_far_from_the_figure_as_they_were_from_it
         assert (here != there).all()
         for side in ("low", "high"):
             by, as_far = getattr(getattr(bounds, figure), side) - here, getattr(getattr(of_like, figure), side) - there
-            np.testing.assert_allclose(by, as_far, rtol=1e-9)
+            # What is simulated bears the error of its draws besides, added in squares.
+            error = getattr(told, f"{figure}_error", np.zeros(6))
+            np.testing.assert_allclose(np.abs(by), np.hypot(as_far, 1.959964 * error), rtol=1e-6)
+
+
+def test_bounds_of_a_simulation_of_few_paths_are_wider():
+    pnl = walks(4, n=2500)
+    few, many = (TailCall("monte_carlo", NINETY_NINE, paths=paths) for paths in (2_000, 100_000))
+    width = [
+        bounds.value_at_risk.high - bounds.value_at_risk.low
+        for bounds in (bound_tail(pnl, call, measured(pnl, call), SEED) for call in (few, many))
+    ]
+    assert (width[0] > 1.5 * width[1]).all()
+
+
+def test_the_lower_bound_of_the_shortfall_is_not_below_that_of_value_at_risk():
+    pnl = np.random.RandomState(4).standard_t(4, size=(50, 500))
+    for call in (CALLS["historical"], CALLS["age_weighted"], SCALED):
+        bounds = bound_tail(pnl, call, measured(pnl, call), SEED)
+        assert (bounds.expected_shortfall.low >= bounds.value_at_risk.low).all()
+
+
+def test_a_scenario_from_a_dead_calm_is_noted():
+    calm = np.concatenate([np.tile([1.0, -1.0], 75), np.zeros(99), [-5.0]])[np.newaxis]
+    call = SCALED
+    ordinary = np.random.RandomState(3).standard_normal((1, 250))
+    assert measured(calm, call).note.tolist() == [FitNote.SCALED_FAR]
+    assert measured(ordinary, call).note.tolist() == [FitNote.AS_ASKED]
 
 
 def test_over_overlapping_periods_others_than_historical_have_a_figure_and_no_bounds():
