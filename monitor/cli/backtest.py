@@ -12,6 +12,7 @@ from typing import Any
 import click
 from pydantic_core import PydanticCustomError
 from rich.console import Console
+from rich.padding import Padding
 from rich.progress import track
 from rich.table import Table
 
@@ -34,10 +35,13 @@ from monitor.world import MeasureCall
 FIRM = "firm"
 DAYS_SHOWN = 12
 LEGEND = (
-    "over: exceptions, losses larger than value at risk; due: as many as a right forecast has on average. zone: the "
-    "Basel Committee's traffic light, for any number of days. Then p-values, * where a test rejects at 5 %: coverage "
+    "over: exceptions, which are losses larger than value at risk, and days without forecast or P&L where the site "
+    "counts them; due: as many as a right forecast has on average. recorded: as the evenings told it at the time; "
+    "challenger: named in the site file beforehand. zone: the Basel Committee's traffic light, for any number of days, "
+    "of which few prove little. Then p-values, * where a test rejects at 5 %: coverage "
     "(Kupiec 1995), order (do exceptions come in clusters: Christoffersen 1998), both together, shortfall (Acerbi and "
-    "Szekely 2014, Z2), spread (the whole distribution, by Kolmogorov and Smirnov; indicative only)."
+    "Szekely 2014, Z2), spread (the whole distribution, by Kolmogorov and Smirnov; indicative only: it "
+    "rejects too seldom). -: not to be had, such as without exceptions, or of figures alone."
 )
 CAUTION = (
     "A good record is no promise: value at risk is not the worst case, few exceptions prove little, and none of this "
@@ -80,10 +84,10 @@ def backtest(
 
     Without --method each subject is tested under the methods behind its figures: the site's default, the rules on its
     value at risk, the challenger that the site file names, and what the evenings recorded at the time. One-day
-    forecasts throughout, on the positions held then. Reads the record and writes nothing.
+    forecasts throughout, on the positions held then. Records nothing.
     """
     if not methods and (window is not None or confidence is not None):
-        raise click.UsageError("--window and --confidence go with --method")
+        raise click.UsageError("--window and --confidence go with --method, such as --method historical --window 250")
     if first is not None and last is not None and first > last:
         raise click.UsageError(f"--from {first} lies after --to {last}")
     site = open_site(site_file)
@@ -146,12 +150,14 @@ def _print(site: str, made: Backtest) -> None:
         letters = {_letter(at): record for at, record in enumerate(records)}
         for letter, record in letters.items():
             reasons = ", ".join(record.asked.reasons)
-            console.print(f"  {letter}  {method_words(record.asked.call.parameters)} ({reasons})")
+            names = Table.grid(padding=(0, 2))
+            names.add_row(f"  {letter}", f"{method_words(record.asked.call.parameters)} ({reasons})")
+            console.print(names)
         console.print(_table(letters))
         for line in _remarks(letters):
-            console.print(f"  {line}")
+            console.print(Padding(line, (0, 0, 0, 2), expand=False))
         if subject in made.sentences:
-            console.print(f"  The newest window: {made.sentences[subject]}")
+            console.print(Padding(f"The newest window: {made.sentences[subject]}", (0, 0, 0, 2), expand=False))
     console.print(f"\n{LEGEND}\n{CAUTION}")
 
 
@@ -201,24 +207,30 @@ def _p(test: Tested) -> str:
 def _remarks(letters: Mapping[str, Record]) -> Iterator[str]:
     """What a reader must know beyond the table: which days, what is missing, whose P&L."""
     judgements = {letter: record.judgement for letter, record in letters.items()}
-    exceptions = {letter: own.exception_days for letter, own in judgements.items()}
     missing = {letter: own.missing_days for letter, own in judgements.items()}
-    if any(exceptions.values()):
-        yield f"Exceptions on {_listed(exceptions)}."
+    struck = {
+        letter: tuple(day for day in own.exception_days if day not in own.missing_days)
+        for letter, own in judgements.items()
+    }
+    if any(struck.values()):
+        yield f"Losses larger than value at risk on {_listed(struck)}."
     if any(missing.values()):
-        yield f"Without forecast or P&L: {_listed(missing)}."
+        counted = any(set(own.missing_days) & set(own.exception_days) for own in judgements.values())
+        yield f"Without forecast or P&L{', counted as exceptions' if counted else ''}: {_listed(missing)}."
+    for reason in dict.fromkeys(reason for record in letters.values() for reason in record.reasons):
+        yield f"Missing: {reason}."
     carried = max(own.carried for own in judgements.values())
     if carried:
         yield f"{count(carried, 'day')} with a P&L that rests in part on older prices or rates."
+    counts: dict[str, list[str]] = {}
     for letter, own in judgements.items():
-        if own.exceptions_of["actual"] is not None:
+        if own.days and None not in own.exceptions_of.values():
             both = f"{own.exceptions_of['hypothetical']} by hypothetical, {own.exceptions_of['actual']} by actual P&L"
-            yield f"{letter}: {both}; counted by {own.counted_from} P&L."
-    for reason in dict.fromkeys(reason for record in letters.values() for reason in record.reasons):
-        yield f"Missing: {reason}."
-    for letter, record in letters.items():
-        if not record.judgement.days and not record.reasons:
-            yield f"{letter}: no day counts yet: the window is not full, or nothing was measured."
+            counts.setdefault(f"{both}; counted by {own.counted_from} P&L", []).append(letter)
+        if not own.days and not letters[letter].reasons:
+            counts.setdefault("no day counts yet: the window is not full, or nothing was measured", []).append(letter)
+    for text, own_letters in counts.items():
+        yield f"{' '.join(own_letters)}: {text}."
 
 
 def _listed(days: Mapping[str, Sequence[date]]) -> str:

@@ -68,7 +68,13 @@ _ALL = (
     Measure("component", "contribution", LOSS_UNITS, LOSS_UNITS, ComponentParameters),
     Measure("incremental", "incremental contribution", LOSS_UNITS, LOSS_UNITS, ComponentParameters),
     Measure("marginal", "marginal contribution", (Unit.RATIO,), (Unit.RATIO,), ComponentParameters),
-    Measure("tail_index", "tail index of losses", (Unit.NUMBER,), (Unit.NUMBER,), TailIndexParameters),
+    Measure(
+        "tail_index",
+        "tail index of losses",
+        (Unit.NUMBER,),
+        (Unit.NUMBER,),
+        TailIndexParameters,
+    ),
     Measure("day_loss", "loss of the day", LOSS_UNITS, LOSS_UNITS, DayLossParameters),
 )
 MEASURES: Mapping[str, Measure] = {measure.name: measure for measure in _ALL}

@@ -9,7 +9,7 @@ import numpy as np
 from monitor.limits.measured import Measured, Parameters
 from monitor.limits.slices import Slice
 from monitor.limits.wholes import whole_of
-from monitor.limits.windowed import WORST_FOR_MEAN, how_of, short_mark, tail_call, tail_notes
+from monitor.limits.windowed import WORST_FOR_MEAN, WORST_FOR_QUANTILE, how_of, short_mark, tail_call, tail_notes
 from monitor.risk.components import marginal as marginal_of
 from monitor.risk.figures import LACK_TEXT, Lack
 from monitor.risk.methods import incremental_tail, measure_tail, tail_components
@@ -37,7 +37,9 @@ def component(part: Slice, parameters: Parameters, _unit: Unit) -> Measured:
             if lack is not Lack.NONE:
                 measured.leave_out(at, LACK_TEXT[lack])
             if abs(factor - 1.0) > NOT_SCALED:
-                note = f"components of the Harrell-Davis estimate, times {factor:.3f} to add up to the figure told"
+                note = (
+                    f"shared out by a smoothed quantile (Harrell and Davis), times {factor:.3f} to add up to the figure"
+                )
                 measured.mark(at, [Mark(MarkKind.METHOD, note)])
     return measured
 
@@ -72,7 +74,7 @@ def incremental(part: Slice, parameters: Parameters, _unit: Unit) -> Measured:
 
 def _note(measured: Measured, places: list[int], rows: Floats, parameters: Parameters) -> None:
     """Mark subjects where the figure of their book is not made as the rule asks."""
-    inexact = WORST_FOR_MEAN if parameters["of"] == "expected_shortfall" else None
+    inexact = WORST_FOR_MEAN if parameters["of"] == "expected_shortfall" else WORST_FOR_QUANTILE
     for text in tail_notes(measure_tail(rows.sum(axis=0)[np.newaxis, :], tail_call(parameters)), inexact).values():
         for at in places:
             measured.mark(at, [Mark(MarkKind.METHOD, text)])

@@ -10,8 +10,9 @@ from pydantic import PlainValidator
 from monitor.reading.fields import probability, whole
 from monitor.reading.shapes import Shape
 
+_DECAY = probability("0.5", what="a decay", such_as="0.94")
 Confidence = Annotated[Decimal, PlainValidator(probability("0.5"))]
-Decay = Annotated[float, PlainValidator(lambda value: float(probability("0.5")(value)))]
+Decay = Annotated[float, PlainValidator(lambda value: float(_DECAY(value)))]
 WindowLength = Annotated[int, PlainValidator(whole(2, 10_000))]
 
 

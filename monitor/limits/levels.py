@@ -34,6 +34,9 @@ def read_levels(
     """
     for key, level in written.items():
         _check_unit(document, (*path, key), level, measure, unit)
+    if measure.name == "tail_index" and "limit" in written:
+        remedy = "The smaller a tail index, the fatter the tail"
+        document.refuse((*path, "limit"), "`limit_below`", "`limit` for tail_index", remedy=remedy, at_key=True)
     keys = {key: key for key in written}
     if "limit_below" in keys and "limit" not in keys and "near" in keys and "near_below" not in keys:
         keys["near_below"] = keys.pop("near")

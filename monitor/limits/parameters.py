@@ -32,6 +32,8 @@ VOLATILITY_METHODS = ("sample", "ewma", "garch", *RANGE_METHODS)
 # As in `risk`, which reading rules need not load.
 LEAST_EXCEEDANCES = 20  # of peaks_over_threshold
 LEAST_IN_TAIL = 10  # paths of monte_carlo
+LEAST_SESSIONS = 100  # of garch
+LEAST_AGE_DECAY = 0.9  # fewer than 19 sessions speak: a cautious choice, no source
 LARGEST_INDEX_SHARE = "0.2"  # of tail_index
 LATER_PARAMETERS = {
     "participation": "the share of traded volume",
@@ -138,6 +140,8 @@ class TailParameters(Parameters):
             yield from _too_long(self.horizon_days, filled["window"])
         if self.method == "peaks_over_threshold":
             yield from _too_few_peaks(filled["window"], self.tail_share)
+        if filled.get("scaling") == "garch":
+            yield from _too_few_sessions(filled["window"])
         if self.method == "monte_carlo":
             yield from _too_few_paths(self.paths, filled["confidence"])
 
@@ -145,6 +149,9 @@ class TailParameters(Parameters):
 def _decays(method: str, scaling: str, decay: float | None) -> Iterator[Contradiction]:
     if method == "age_weighted" and decay is None:
         yield "method", "age_weighted without a decay", "`decay` beside it, such as 0.995"
+    if method == "age_weighted" and decay is not None and decay < LEAST_AGE_DECAY:
+        speaking = round((1 + decay) / (1 - decay))
+        yield "decay", f"a decay of {decay}, which leaves {speaking} sessions to speak", f"at least {LEAST_AGE_DECAY}"
     if method == "volatility_scaled" and scaling == "garch" and decay is not None:
         yield "decay", "a decay with the scaling garch", "no decay, or the scaling ewma"
 
@@ -158,6 +165,11 @@ def _too_few_peaks(window: int, tail_share: Decimal) -> Iterator[Contradiction]:
     if (peaks := int(tail_share * window)) < LEAST_EXCEEDANCES:
         found = f"peaks_over_threshold with {peaks} sessions beyond the threshold in a window of {window}"
         yield "method", found, f"at least {LEAST_EXCEEDANCES}: a longer window or a larger tail_share"
+
+
+def _too_few_sessions(window: int) -> Iterator[Contradiction]:
+    if window < LEAST_SESSIONS:
+        yield "method", f"garch in a window of {window}", f"a window of at least {LEAST_SESSIONS}"
 
 
 def _too_few_paths(paths: int, confidence: Decimal) -> Iterator[Contradiction]:
@@ -233,6 +245,11 @@ class VolatilityParameters(Parameters):
 
     def _methods(self) -> tuple[str, ...]:
         return VOLATILITY_METHODS
+
+    def contradictions(self, filled: Filled) -> Iterator[Contradiction]:
+        yield from super().contradictions(filled)
+        if self.method == "garch":
+            yield from _too_few_sessions(filled["window"])
 
 
 class TailIndexParameters(Parameters):

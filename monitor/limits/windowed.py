@@ -23,6 +23,7 @@ from monitor.risk.volatility import annualised, ewma, sample
 from monitor.words import Mark, MarkKind, Unit
 from monitor.world import How, Integers
 
+WORST_FOR_QUANTILE = "less than one scenario lies in the tail: the figure is the worst of the window"
 WORST_FOR_MEAN = "less than one scenario lies in the tail: the worst one stands in for the mean"
 
 
@@ -37,7 +38,9 @@ class Found:
 
 def value_at_risk(part: Slice, parameters: Parameters, _unit: Unit) -> Measured:
     """The loss that is exceeded with probability 1 - confidence over the horizon. Amount, positive when a loss."""
-    return _of_tail(part, parameters, lambda tail: tail.value_at_risk, lambda bounds: bounds.value_at_risk)
+    return _of_tail(
+        part, parameters, lambda tail: tail.value_at_risk, lambda bounds: bounds.value_at_risk, WORST_FOR_QUANTILE
+    )
 
 
 def expected_shortfall(part: Slice, parameters: Parameters, _unit: Unit) -> Measured:
@@ -120,7 +123,7 @@ def _of_tail(
     parameters: Parameters,
     chosen: Callable[[Tail], Figures],
     bounds: Callable[[TailBounds], Bounds],
-    inexact: str | None = None,
+    inexact: str,
 ) -> Measured:
     """inexact: what to say where less than one scenario lies in the tail."""
     call = tail_call(parameters)
@@ -209,9 +212,9 @@ def short_mark(n: int, window: int) -> Mark:
     return Mark(MarkKind.SHORT, f"{n} of the {window} sessions of the window")
 
 
-def tail_notes(tail: Tail, inexact: str | None) -> dict[int, str]:
+def tail_notes(tail: Tail, inexact: str) -> dict[int, str]:
     """By row, what a reader must know about a tail. inexact: what to say where less than one scenario lies in it."""
-    first = dict.fromkeys(range(len(tail.note)), inexact) if inexact and not tail.exact_tail else {}
+    first = dict.fromkeys(range(len(tail.note)), inexact) if not tail.exact_tail else {}
     return first | _fit_notes(tail.note)
 
 

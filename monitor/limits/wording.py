@@ -206,7 +206,8 @@ def _way(parameters: Mapping[str, Any]) -> str:
 def method_words(parameters: Mapping[str, Any]) -> str:
     """A method of value at risk with everything that it was told, in a few words."""
     window, confidence = _counted(parameters["window"], "session"), percent(parameters["confidence"])
-    return ", ".join([_METHODS[parameters["method"]], *details(parameters), confidence, window])
+    drift = ["drift as in the window"] if parameters.get("drift") == "sample" else []
+    return ", ".join([_METHODS[parameters["method"]], *details(parameters), *drift, confidence, window])
 
 
 def details(parameters: Mapping[str, Any]) -> list[str]:

@@ -158,14 +158,13 @@ def how_made(how: How, n: int | None = None) -> str:
     """The method behind a figure: `historical, 99 %, 1 day, 500 sessions, n = 500`; empty for plain sums."""
     to = how.of in ("value_at_risk", "expected_shortfall")
     parts = [
-        f"to {measure_name(how.of)}" if to and how.of else None,
         how.method.replace("_", " ") if how.method else None,
         confidence(how.confidence) if how.confidence is not None else None,
         count(how.horizon_days, "day") if how.horizon_days is not None else None,
         count(how.window, "session") if how.window is not None else None,
         f"n = {n}" if n is not None else None,
         how.detail,
-        f"of {measure_name(how.of)}" if how.of and not to else None,
+        f"{'to' if to else 'of'} {measure_name(how.of)}" if how.of else None,
     ]
     return ", ".join(part for part in parts if part)
 
@@ -195,15 +194,15 @@ def limit_of(answer: Answer) -> str:
 
 
 def bounds_of(answer: Answer) -> str | None:
-    """The sampling bounds at 95 %, saying which of them do not exist and why; None where the measure has none."""
+    """The sampling bounds at 95 %, and why one does not exist; None where the measure has none."""
     if answer.low is None and answer.high is None and answer.unbounded is None:
         return None
     low, high = (
-        "no bound" if bound is None else figure(bound, answer.unit, answer.currency, answer.measure)
+        None if bound is None else figure(bound, answer.unit, answer.currency, answer.measure)
         for bound in (answer.low, answer.high)
     )
     why = f": {answer.unbounded}" if answer.unbounded else ""
-    return f"{low} to {high} (95 % sampling bounds{why})"
+    return f"{_between(low, high)} (95 % sampling bounds{why})"
 
 
 def bounds_in_short(answer: Answer) -> str:
@@ -212,7 +211,13 @@ def bounds_in_short(answer: Answer) -> str:
         return ""
     style = _style(answer.unit, answer.currency, answer.measure)
     low, high = (
-        "none" if bound is None else _digits(bound * style.scale, _decimals(bound * style.scale, style))
+        None if bound is None else _digits(bound * style.scale, _decimals(bound * style.scale, style))
         for bound in (answer.low, answer.high)
     )
-    return f"{low} to {high}"
+    return f"95 %: {_between(low, high)}"
+
+
+def _between(low: str | None, high: str | None) -> str:
+    if low is not None and high is not None:
+        return f"{low} to {high}"
+    return f"at least {low}" if low is not None else f"at most {high}" if high is not None else "no bounds"

@@ -12,11 +12,19 @@ from monitor.notices.excess_words import EXCESS_COLUMNS, answer_data, excess_dat
 from monitor.notices.message import Notice, Topic, one_line
 from monitor.notices.news import EveningNews, evening_data, record, when
 from monitor.notices.story import LISTED, Section, Story, Tone, render, table
-from monitor.words import ExcessState, Outcome, Standing
+from monitor.words import ExcessState, FileKind, Outcome, Standing
 from monitor.world import Answer, BookFigures, Standings
 
 _NAMED_OF_A_CAUSE = 8
 _FINDINGS_OF_A_FILE = 5
+NOT_WITHIN = (
+    "What is named below was not measured, or was measured without a file that was refused. Do not read it as "
+    "within. When the data is put right, deliver it and check the evening again; a new edition replaces this."
+)
+NO_LIMIT_RESTS_ON_IT = (
+    "What a book says it made was refused. The evening is complete, for no limit rests on it; the backtest does. "
+    "When the file is put right, deliver it again."
+)
 
 
 def nightly_note(news: EveningNews) -> Notice:
@@ -58,18 +66,17 @@ def incomplete_notice(news: EveningNews) -> list[Notice]:
         return []
     standings, date = news.standings, figures.day(news.recipe.date)
     what = _amiss(news)
+    harmless = len(sections) == 1 and bool(news.refused) and all(own.file is FileKind.PNL for own in news.refused)
+    word = "FILE REFUSED" if harmless else "INCOMPLETE"
     story = Story(
         Tone.DOUBT,
-        f"INCOMPLETE: {news.site}, evening of {date}, round {news.recipe.round}: {what}.",
-        (
-            "What is named below was not measured, or was measured without a file that was refused. Do not read it as "
-            "within. When the data is put right, deliver it and check the evening again; a new edition replaces this.",
-        ),
+        f"{word}: {news.site}, evening of {date}, round {news.recipe.round}: {what}.",
+        (NO_LIMIT_RESTS_ON_IT if harmless else NOT_WITHIN,),
         (*sections, Section("The evening", when(news))),
         record(news.seq, news.hash, news.page),
     )
     text, html = render(story)
-    title = one_line(f"INCOMPLETE: {news.site} {date} ({news.recipe.round}), {what}")
+    title = one_line(f"{word}: {news.site} {date} ({news.recipe.round}), {what}")
     data = {
         **evening_data(news),
         "lacking": list(standings.lacking),

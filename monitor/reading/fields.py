@@ -145,7 +145,7 @@ def probability(
         if isinstance(value, bool) or not isinstance(value, int | Decimal):
             raise unfit(f"{what} such as {such_as}")
         if not Decimal(least) <= value < Decimal(open_end):
-            remedy = f"Write {value} %" if value > 1 else ""
+            remedy = f"Write {value} %" if value > 1 and Decimal(least) <= value / 100 < Decimal(open_end) else ""
             raise unfit(f"{what} from {least} to below {open_end}, such as {such_as}", remedy=remedy)
         return Decimal(value)
 

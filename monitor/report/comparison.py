@@ -57,7 +57,7 @@ def _facts(series: Series, confidence: Decimal | None) -> Iterable[tuple[str, st
     yield "Sessions shown", f"{len(series.days):,}", f"{first} to {last}"
     if series.compared < len(series.days):
         yield "with both figures", f"{series.compared:,}", "only these can be compared"
-    yield "Exceptions counted", f"{len(struck):,}", _expected(series.compared, confidence)
+    yield "Exceptions, by hypothetical P&L", f"{len(struck):,}", _expected(series.compared, confidence)
     if struck:
         newest = [series.days[place].isoformat() for place in reversed(struck[-NEWEST:])]
         yield "Newest exceptions", newest[0], ", ".join(newest[1:])

@@ -29,7 +29,7 @@ SHARED_OUT = [
     (method, of) for method in COMPONENT_METHODS for of in FIGURES if (method, of) != ("age_weighted", "value_at_risk")
 ]
 VAR = "{name: value_at_risk}"
-SCALED = "components of the Harrell-Davis estimate, times "
+SCALED = "shared out by a smoothed quantile (Harrell and Davis), times "
 
 
 @pytest.fixture(scope="module")
@@ -169,7 +169,7 @@ def test_the_factor_to_the_figure_told_is_shown_in_a_mark(world):
         for answer in of_rule(found, "parts").values():
             if answer.subject.book == book.id:
                 [note] = [mark.note for mark in answer.marks if mark.kind is MarkKind.METHOD]
-                assert note == f"{SCALED}{factor:.3f} to add up to the figure told"
+                assert note == f"{SCALED}{factor:.3f} to add up to the figure"
                 assert not answer.doubtful
 
 
@@ -404,7 +404,7 @@ def test_where_the_estimate_is_far_from_the_figure_there_are_components_of_the_s
     weights = np.diff(stats.beta.cdf(np.arange(5) / 4, 0.25 * 5, 0.75 * 5))
     factor = found["whole", "book:quay"].value / -(pnl * weights).sum()
     assert not 0.8 <= factor <= 1.25
-    assert mark.note == f"{SCALED}{factor:.3f} to add up to the figure told"
+    assert mark.note == f"{SCALED}{factor:.3f} to add up to the figure"
     assert found["shortfall", "position:quay/ALFA"].value == pytest.approx(-pnl[0])
 
 

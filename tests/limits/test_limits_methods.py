@@ -113,7 +113,8 @@ def rule_text(asked: str, each: str | None = None, name: str = "") -> str:
     unit = unit_of(asked, each)
     limit = {Unit.OF_NAV: "100 %", Unit.RATIO: "5" if ASKED[asked][0] == "leverage" else "100 %"}.get(unit, "100")
     more = {"each": each} if each else {}
-    return rule(name or asked, measure_text(asked, each), f"limit: {limit}", unit.value, **more)
+    level = "limit_below: 0.1" if ASKED[asked][0] == "tail_index" else f"limit: {limit}"
+    return rule(name or asked, measure_text(asked, each), level, unit.value, **more)
 
 
 @cache
@@ -452,11 +453,7 @@ def test_json_of_a_check_gives_the_bounds_or_says_why_there_is_none(tmp_path):
         rule("one", "{name: value_at_risk, confidence: 0.99, window: 4}", applies_to="{book: quay}"),
         rule("none", "{name: gross}", applies_to="{book: quay}"),
         rule("no-figure", "{name: tail_index, window: 4}", "limit_below: 2", "number", applies_to="{book: quay}"),
-        rule(
-            "odd",
-            "{name: expected_shortfall, method: volatility_scaled, scaling: garch, window: 4}",
-            applies_to="{book: quay}",
-        ),
+        rule("odd", "{name: expected_shortfall, method: volatility_scaled, window: 4}", applies_to="{book: quay}"),
     ]
     site = SmallSite(tmp_path / "site", rules(*lines))
     site.leave("instruments.csv", ["instrument,currency,calendar", "ALFA,EUR,XDUB"])
@@ -482,5 +479,6 @@ def test_json_of_a_check_gives_the_bounds_or_says_why_there_is_none(tmp_path):
     assert found["one"]["unbounded"] == "too few scenarios for a bound at this confidence"
     assert (found["none"]["low"], found["none"]["high"], found["none"]["unbounded"]) == (None, None, None)
     assert (found["no-figure"]["value"], found["no-figure"]["reason"]) == (None, LACK_TEXT[Lack.FEW_IN_TAIL])
-    assert found["odd"]["detail"] == "scaled by GARCH volatility"
-    assert {"mark": "method", "note": "scaled by EWMA volatility: GARCH could not be fitted"} in found["odd"]["marks"]
+    assert found["odd"]["detail"] == "scaled by exponentially weighted volatility, decay 0.94"
+    worst = "less than one scenario lies in the tail: the worst one stands in for the mean"
+    assert {"mark": "method", "note": worst} in found["odd"]["marks"]

@@ -208,7 +208,7 @@ def test_everything_that_a_rule_can_ask_is_one_sentence_of_its_own() -> None:
 
     for one, said in made:
         told = one.measure.parameters
-        assert re.fullmatch(r"r: the .+ must be at most [\d,.]+( %)?( (of|in) .+)?\.", said)
+        assert re.fullmatch(r"r: the .+ must be at (most|least) [\d,.]+( %)?( (of|in) .+)?\.", said)
         assert said.count("(") == said.count(")")
         assert not re.search(r"_|None|Decimal|\bTrue\b|\bFalse\b|  |\( |, ,|, \)", said)
         if "method" in told:

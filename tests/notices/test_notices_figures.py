@@ -92,4 +92,4 @@ def test_an_answer_on_its_lower_side_is_held_against_the_lower_limit() -> None:
 
 def test_missing_bounds_are_said_to_be_missing() -> None:
     assert figures.bounds_of(make_answer(low=None, high=None)) is None
-    assert figures.bounds_of(make_answer(high=None)) == "EUR 1,190,000 to no bound (95 % sampling bounds)"
+    assert figures.bounds_of(make_answer(high=None)) == "at least EUR 1,190,000 (95 % sampling bounds)"

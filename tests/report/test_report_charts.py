@@ -103,7 +103,7 @@ def test_the_figures_beside_the_chart() -> None:
     assert {what: (figure, note) for what, figure, note in shown.facts} == {
         "Sessions shown": ("5", "2026-03-02 to 2026-03-06"),
         "with both figures": ("4", "only these can be compared"),
-        "Exceptions counted": ("2", "about 0.0 expected at 99 %"),
+        "Exceptions, by hypothetical P&L": ("2", "about 0.0 expected at 99 %"),
         "Newest exceptions": ("2026-03-04", "2026-03-02"),
         "Latest VaR": ("EUR 14.00", "forecast for 2026-03-06"),
         "Latest P&L": ("EUR -1.50", "on 2026-03-06"),
@@ -123,7 +123,7 @@ def test_the_expected_number_follows_confidence_and_days() -> None:
 def test_without_figures_of_tonight_no_method_is_claimed() -> None:
     (shown,) = comparisons([made((10, -1))], [])
     assert shown.how == "" and How().confidence is None
-    assert ("Exceptions counted", "0", "") in shown.facts
+    assert ("Exceptions, by hypothetical P&L", "0", "") in shown.facts
 
 
 def test_a_series_without_days_says_nothing() -> None:
