@@ -453,7 +453,11 @@ def test_json_of_a_check_gives_the_bounds_or_says_why_there_is_none(tmp_path):
         rule("one", "{name: value_at_risk, confidence: 0.99, window: 4}", applies_to="{book: quay}"),
         rule("none", "{name: gross}", applies_to="{book: quay}"),
         rule("no-figure", "{name: tail_index, window: 4}", "limit_below: 2", "number", applies_to="{book: quay}"),
-        rule("odd", "{name: expected_shortfall, method: volatility_scaled, window: 4}", applies_to="{book: quay}"),
+        rule(
+            "odd",
+            "{name: expected_shortfall, method: volatility_scaled, confidence: 0.99, window: 4}",
+            applies_to="{book: quay}",
+        ),
     ]
     site = SmallSite(tmp_path / "site", rules(*lines))
     site.leave("instruments.csv", ["instrument,currency,calendar", "ALFA,EUR,XDUB"])
