@@ -111,37 +111,49 @@ class Parameters(Shape):
         return TAIL_METHODS
 
 
-class TailParameters(Parameters):
-    """Value at risk and expected shortfall. An age-weighted rule states its decay: one for volatility is too quick."""
+class ScenarioParameters(Parameters):
+    """What value at risk, expected shortfall and contributions to them have in common.
 
-    method: TailMethod = "historical"
+    An age-weighted rule states its decay: one for volatility is too quick.
+    """
+
+    method: str = "historical"
     confidence: Confidence | None = None
     horizon_days: HorizonDays = 1
-    horizon: Horizon = "square_root"
     window: WindowLength | None = None
     drift: Drift = "zero"
     decay: Decay | None = None
     scaling: Scaling = "ewma"
-    fit: Fit = "likelihood"
-    tail_share: TailShare = Decimal("0.1")
-    distribution: Distribution = "normal"
-    paths: Paths = 100_000
 
     def filled(self, defaults: Defaults) -> dict[str, object]:
         parameters = super().filled(defaults)
-        if self.method == "volatility_scaled" and self.scaling == "garch":
+        if parameters.get("scaling") == "garch":
             parameters.pop("decay")
         return parameters
 
     def contradictions(self, filled: Filled) -> Iterator[Contradiction]:
         yield from super().contradictions(filled)
         yield from _decays(self.method, self.scaling, self.decay)
+        if filled.get("scaling") == "garch":
+            yield from _too_few_sessions(filled["window"])
+
+
+class TailParameters(ScenarioParameters):
+    """Value at risk and expected shortfall."""
+
+    method: TailMethod = "historical"
+    horizon: Horizon = "square_root"
+    fit: Fit = "likelihood"
+    tail_share: TailShare = Decimal("0.1")
+    distribution: Distribution = "normal"
+    paths: Paths = 100_000
+
+    def contradictions(self, filled: Filled) -> Iterator[Contradiction]:
+        yield from super().contradictions(filled)
         if filled.get("horizon") == "overlapping":
             yield from _too_long(self.horizon_days, filled["window"])
         if self.method == "peaks_over_threshold":
             yield from _too_few_peaks(filled["window"], self.tail_share)
-        if filled.get("scaling") == "garch":
-            yield from _too_few_sessions(filled["window"])
         if self.method == "monte_carlo":
             yield from _too_few_paths(self.paths, filled["confidence"])
 
@@ -193,28 +205,15 @@ def tail_parameters(method: str) -> TailParameters:
     return TailParameters.model_validate({"name": "value_at_risk", "method": method, **decay})
 
 
-class ComponentParameters(Parameters):
+class ComponentParameters(ScenarioParameters):
     """What a subject adds to the figure `of` the book that it lies in, or of the firm."""
 
+    method: ComponentMethod = "historical"
     of: TailName = "value_at_risk"
     within: Whole = "book"
-    method: ComponentMethod = "historical"
-    confidence: Confidence | None = None
-    horizon_days: HorizonDays = 1
-    window: WindowLength | None = None
-    drift: Drift = "zero"
-    decay: Decay | None = None
-    scaling: Scaling = "ewma"
-
-    def filled(self, defaults: Defaults) -> dict[str, object]:
-        parameters = super().filled(defaults)
-        if self.method == "volatility_scaled" and self.scaling == "garch":
-            parameters.pop("decay")
-        return parameters
 
     def contradictions(self, filled: Filled) -> Iterator[Contradiction]:
         yield from super().contradictions(filled)
-        yield from _decays(self.method, self.scaling, self.decay)
         if self.name != "incremental" and self.method == "age_weighted" and self.of == "value_at_risk":
             yield (
                 "method",
