@@ -24,7 +24,7 @@ from monitor.facts import EveningMissed, Hand, RulesAdopted
 from monitor.notices.compose import compose, compose_missed, compose_summary, compose_terms, compose_trouble
 from monitor.notices.message import Notice, Topic
 from monitor.notices.news import EveningNews, PastEvening, SummaryNews
-from monitor.words import CuredBy, ExcessState, Mark, MarkKind, Outcome, Side, Standing
+from monitor.words import CuredBy, ExcessState, FileKind, Mark, MarkKind, Outcome, Side, Standing
 from monitor.world import Standings
 
 Make = Callable[..., EveningNews]
@@ -120,6 +120,19 @@ def test_an_incomplete_evening_names_each_cause_once_with_its_place(bad_evening:
     assert "prices_2026-03-04.csv:14:2: found '1O3.2'; expected a price such as 103.25. Send" in flat(notice)
     assert "5 further reasons" in flat(notice)
     assert "fx_2026-03-04.csv did not come by 19:00" in flat(notice)
+
+
+def test_a_refused_file_of_the_books_own_pnl_leaves_the_evening_complete(evening: Make) -> None:
+    own = replace(REFUSED, name="pnl_2026-03-04.csv", file=FileKind.PNL)
+
+    harmless = the(compose(evening(refused=(own,))), Topic.INCOMPLETE)
+    both = the(compose(evening(refused=(own, REFUSED))), Topic.INCOMPLETE)
+
+    assert harmless.title.startswith("FILE REFUSED: ")
+    assert "no limit rests on it" in " ".join(harmless.text.split())
+    assert "Do not read it as within" not in " ".join(harmless.text.split())
+    assert both.title.startswith("INCOMPLETE: ")
+    assert "Do not read it as within" in " ".join(both.text.split())
 
 
 def test_a_refused_file_alone_makes_the_notice(evening: Make) -> None:
